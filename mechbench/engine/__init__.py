@@ -1,0 +1,1 @@
+"""Measures of manipulability, revenue and welfare: exact integration and simulation."""

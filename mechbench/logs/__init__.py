@@ -1,0 +1,1 @@
+"""Bid logs: reading them in bounded memory and turning them into a family of values."""

@@ -1,0 +1,1 @@
+"""The market: who bids, for what, and under which reserve; and the file that describes it."""
