@@ -99,8 +99,8 @@ class GeneralisedPareto(Distribution):
     def _at(self, hazard: Floats) -> Floats:
         """Value at which the cumulated hazard is reached."""
         with np.errstate(over="ignore"):
-            value = np.asarray(self._scale * hazard * exprel(self._xi * hazard))
-        return np.minimum(value, self._high)
+            value: Floats = self._scale * hazard * exprel(self._xi * hazard)
+        return np.asarray(np.minimum(value, self._high))
 
     def _hazard(self, x: Floats) -> Floats:
         """Cumulated hazard, ``-log survival``: infinite from the upper end on."""

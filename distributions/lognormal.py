@@ -6,7 +6,8 @@ a small sigma, irregular for a large one. The inverse hazard rate is ``sigma Q(s
 ``m(z) = sqrt(pi / 2) erfcx(z / sqrt 2)`` (Mills' ratio).
 
 `scipy.special.ndtri` was within 2e-16 of mpmath from s = 1e-320 to 1 - 1e-12 (scipy 1.17), so it stands
-uncorrected; the exponential turns that into about ``1e-16 sigma |z|`` of the value.
+uncorrected; the exponential turns that into about ``1e-16 sigma |z|`` of the value. A sigma above 15 is
+refused: its quantiles leave the range of floats above s = 1e-300.
 
 Sources
 -------
@@ -32,7 +33,14 @@ class Lognormal(Distribution):
     name = "lognormal"
     title = "normal on a logarithmic scale"
     parameters = (
-        Parameter("sigma", "standard deviation of the logarithm", low=0, typical=(0.8, 0.1, 3.0)),
+        Parameter(
+            "sigma",
+            "standard deviation of the logarithm",
+            low=0,
+            high=15,
+            high_included=True,
+            typical=(0.8, 0.1, 3.0),
+        ),
         Parameter("scale", "median value", low=0, typical=(23.0, 1.0), default=1.0),
     )
 
