@@ -13,6 +13,7 @@ bids in falling order; a bid of 0 never wins.
 
 from __future__ import annotations
 
+import functools
 import math
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Mapping, Sequence
@@ -242,6 +243,13 @@ class Distribution(ABC):
         """Upper end minus ``Q(s)`` of a bounded family; override to keep the digits at small s."""
         return self.support[1] - self.upper_quantile(s)
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``, the reciprocal of the hazard rate at the quantile: ``-dQ(s) / d log s``.
+
+        ``Q(s)`` less this is the virtual value. Override where the density runs out of floats or of digits.
+        """
+        return s / self.density(self.upper_quantile(s))
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))`` without the loss of digits of 1 minus almost 1.
 
@@ -250,34 +258,60 @@ class Distribution(ABC):
         s : array
             Upper-tail probability of the lower value.
         log_ratio : array, broadcastable against `s`
-            How much further up the tail the higher value sits, as the log of the ratio of probabilities, >= 0.
+            How much further up the tail the higher value sits: the log of the ratio of probabilities, >= 0.
+
+        Returns
+        -------
+        array
+            Of the shape that the two broadcast to; it may be a read-only view.
 
         Notes
         -----
-        The default integrates the quantile's slope where the two are near,
-        ``Q(t) - Q(s) = integral of e / density(Q(e)) d(log e)`` from t to s, and subtracts where they are far
-        apart (the shortfalls, for a bounded family).
+        Where the two are far apart the default subtracts them (their shortfalls, for a bounded family). Where
+        they are near it integrates the slope of ``log Q`` over the log odds of s, in which that slope is
+        smooth at both ends: its mean over the way is a Chebyshev series whose coefficients depend on `s`
+        alone. A higher value beyond the least float's quantile is taken at that quantile.
         """
-        s, log_ratio = np.broadcast_arrays(s, log_ratio)
-        higher_at = s * np.exp(-log_ratio)
-        higher = self.upper_quantile(higher_at)
-        if math.isfinite(self.support[1]):
-            drop = self.shortfall(s) - self.shortfall(higher_at)
-        else:
-            drop = higher - self.upper_quantile(s)
-        near = log_ratio < _NEAR
+        s, log_ratio = np.asarray(s, dtype=np.float64), np.asarray(log_ratio, dtype=np.float64)
+        rest = 1.0 - s
+        higher_at = np.maximum(s * np.exp(-log_ratio), _LEAST)
+        with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
+            way = np.log1p(s * -np.expm1(-log_ratio) / (rest + _LEAST)) + log_ratio
+            higher = self.upper_quantile(higher_at)
+            if math.isfinite(self.support[1]):
+                drop = np.asarray((self.shortfall(s) - self.shortfall(higher_at)) / higher)
+            else:
+                drop = np.asarray(1.0 - self.upper_quantile(s) / higher)
+        near = way < _NEAR
         if near.any():
-            step = 0.5 * log_ratio[near][:, None]
-            at = s[near][:, None] * np.exp(-step * (1.0 + _GAUSS_NODES))
-            slope = at / self.density(self.upper_quantile(at))
-            drop[near] = (step * _GAUSS_WEIGHTS * slope).sum(axis=1)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            return np.where(higher > 0, drop / higher, 0.0)
+            nodes, weights = _mean_of_way()
+            start = np.minimum(s, 1.0 - 2.0**-53)[..., None]
+            at = start / (start + (1.0 - start) * np.exp(_NEAR * nodes))
+            slope = (1.0 - at) * self.inverse_hazard(at) / self.upper_quantile(at)
+            series = np.broadcast_to(slope @ weights, (*near.shape, nodes.size))[near]
+            mean = np.polynomial.chebyshev.chebval(2.0 / _NEAR * way[near] - 1.0, series.T, tensor=False)
+            drop[near] = -np.expm1(-way[near] * mean)
+        return drop
 
 
-_NEAR = 0.05
-"""Log ratio below which the default `relative_drop` integrates the slope: 6 nodes are then exact to rounding."""
-_GAUSS_NODES, _GAUSS_WEIGHTS = np.polynomial.legendre.leggauss(6)
+_NEAR = 0.5
+"""Distance in log odds below which the default `relative_drop` integrates the slope."""
+_ORDER = 10
+"""Terms of its series: with the slope's nearest singularity about pi away, (8 pi)^-10 of it is left out."""
+_LEAST = 5e-324
+"""The smallest float: added to what may be 0, it makes 0 / 0 a plain 0 and changes nothing else."""
+
+
+@functools.cache
+def _mean_of_way() -> tuple[Floats, Floats]:
+    """Nodes in (0, 1), and what turns values there into the Chebyshev series of their mean from 0 to t."""
+    chebyshev = np.polynomial.chebyshev
+    nodes = 0.5 + 0.5 * chebyshev.chebpts1(_ORDER)
+    to_series = np.linalg.inv(chebyshev.chebvander(2.0 * nodes - 1.0, _ORDER - 1))
+    gauss, gauss_weights = np.polynomial.legendre.leggauss(_ORDER)
+    inside = nodes[:, None] * (0.5 + 0.5 * gauss)
+    means = np.einsum("g,igk->ik", 0.5 * gauss_weights, chebyshev.chebvander(2.0 * inside - 1.0, _ORDER - 1))
+    return nodes, (to_series @ means @ to_series).T
 
 
 @dataclass(frozen=True)
