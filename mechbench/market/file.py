@@ -236,11 +236,11 @@ def _sizes(count: int | list[int], place: Place) -> tuple[int, ...]:
 def _values(table: Table, place: Place, folder: Path) -> FamilyChoice | LogChoice:
     if "family" in table and "log" in table:
         place.refuse("found both family and log", "one of them")
+    if "family" not in table and "log" not in table:
+        _no_values(table, place)
     if "family" in table:
         return FamilyChoice(*_plug_in(table, "family", place))
-    if "log" in table:
-        return _log(read_table(place, table, written.Log), place, folder)
-    _no_values(table, place)
+    return _log(read_table(place, table, written.Log), place, folder)
 
 
 def _no_values(table: Table, place: Place) -> NoReturn:
