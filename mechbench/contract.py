@@ -285,19 +285,29 @@ class Distribution(ABC):
         near = way < _NEAR
         if near.any():
             nodes, weights = _mean_of_way()
-            start = np.minimum(s, 1.0 - 2.0**-53)[..., None]
-            at = start / (start + (1.0 - start) * np.exp(_NEAR * nodes))
-            slope = (1.0 - at) * self.inverse_hazard(at) / self.upper_quantile(at)
+            slope = self._log_slope(np.minimum(s, _BELOW_ONE)[..., None], _NEAR * nodes)
             series = np.broadcast_to(slope @ weights, (*near.shape, nodes.size))[near]
             mean = np.polynomial.chebyshev.chebval(2.0 / _NEAR * way[near] - 1.0, series.T, tensor=False)
             drop[near] = -np.expm1(-way[near] * mean)
         return drop
+
+    def _log_slope(self, s: Floats, way: Floats) -> Floats:
+        """Slope of ``log Q`` by the log odds of s, `way` further up; from whichever end is nearer."""
+        risen = (1.0 - s) * np.exp(way)
+        at, rest = s / (s + risen), risen / (s + risen)
+        slope = rest * self.inverse_hazard(at) / self.upper_quantile(at)
+        low = at > 0.5  # noqa: PLR2004
+        if low.any():
+            value = self.lower_quantile(rest[low])
+            slope[low] = at[low] * rest[low] / (value * self.density(value))
+        return slope
 
 
 _NEAR = 0.5
 """Distance in log odds below which the default `relative_drop` integrates the slope."""
 _ORDER = 10
 """Terms of its series: with the slope's nearest singularity about pi away, (8 pi)^-10 of it is left out."""
+_BELOW_ONE = 1.0 - 2.0**-53
 _LEAST = 5e-324
 """The smallest float: added to what may be 0, it makes 0 / 0 a plain 0 and changes nothing else."""
 
