@@ -94,7 +94,7 @@ class GeneralisedPareto(Distribution):
         further = -np.expm1(-rate * log_ratio)
         here = _LEAST - np.expm1(rate * log_s)
         step = np.exp(rate * log_s) * further
-        return (further if self._xi > 0 else step) / (here + step)
+        return np.asarray((further if self._xi > 0 else step) / (here + step))
 
     def _at(self, hazard: Floats) -> Floats:
         """Value at which the cumulated hazard is reached."""
