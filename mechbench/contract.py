@@ -119,7 +119,8 @@ class Parameter:
         if not math.isinf(self.high):
             word = "at most" if self.high_included else "below"
             parts.append(f"{word} {number_words(self.high)}")
-        return "a number " + " and ".join(parts)
+        kind = "a number" if len(parts) > 1 else "a finite number"
+        return f"{kind} {' and '.join(parts)}"
 
     def check(self, value: object, where: str) -> float | str:
         """Return `value` as this parameter holds it.

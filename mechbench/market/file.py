@@ -296,7 +296,7 @@ def _requirement(measure: str, table: object, place: Place) -> Requirement:
         place.refuse(f"found {found}", "{ at_most = x } or { at_least = x }")
     for side, limit in (("at_most", bound.at_most), ("at_least", bound.at_least)):
         if limit is not None and limit > 1 and measure not in MONEY:
-            place.at(side).refuse_value(limit, "a share from 0 to 1 (5 % is 0.05)")
+            place.at(side).refuse_value(table[side], "a share from 0 to 1 (5 % is 0.05)")
     return Requirement(measure, bound.at_most, bound.at_least, getattr(bound, "above", None))
 
 
@@ -361,7 +361,7 @@ def _setting(parameter: Parameter, table: Table, place: Place) -> float | str:
     found = table[parameter.name]
     try:
         return parameter.check(found, place.path)
-    except (InputError, OverflowError):
+    except (ValueError, OverflowError):  # InputError is one; so are numbers too long to print
         place.refuse_value(found, parameter.domain)
 
 

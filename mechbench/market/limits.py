@@ -88,7 +88,8 @@ def limit_of(key: str) -> str | None:
     plain = key.strip().lower().replace("-", "_").replace(" ", "_")
     if plain in _NOT_YET:
         return f"{_NOT_YET[plain]}: not in this version"
-    words = {plain.removesuffix("s")} | {word.removesuffix("s") for word in plain.split("_")} - {"default"}
+    words = {plain} | set(plain.split("_")) - {"default", "defaults"}
+    words |= {word.removesuffix("s") for word in words}
     for limit in NOT_MODELLED:
         if words & set(limit.words.split()):
             return f"{limit.topic}: not modelled, and the numbers would mislead: {limit.why}"

@@ -240,7 +240,7 @@ def refuse_unknown(place: Place, table: Mapping[str, object], known: Iterable[st
             here = place.at(key)
             reason = limit_of(key)
             if reason is not None:
-                here.refuse(reason)
+                here.refuse(reason, "a market without it")
             here.refuse("unknown key" + _hint(key, known), ", ".join(known) or "nothing")
 
 
@@ -291,4 +291,5 @@ def _syntax(complaint: str, text: str) -> str:
         row = min(int(position[1]), len(lines))
         where = f"line {row}, column {position[2]}"
     what = re.sub(r" \(at [^()]*\)$", "", complaint)
+    what = re.sub(r"\(('[^()]*'),?\)", r"\1", what)  # a key, which the parser shows as a tuple
     return f"{where}: found {_shown(lines[row - 1].strip())}; accepted is TOML, but here: {what}"
