@@ -244,6 +244,10 @@ class Distribution(ABC):
         """Upper end minus ``Q(s)`` of a bounded family; override to keep the digits at small s."""
         return self.support[1] - self.upper_quantile(s)
 
+    def two_ends(self, s: Floats) -> tuple[Floats, Floats]:
+        """``Q(s)`` and its shortfall; override where finding both at once saves work."""
+        return self.upper_quantile(s), self.shortfall(s)
+
     def inverse_hazard(self, s: Floats) -> Floats:
         """``s / density(Q(s))``, the reciprocal of the hazard rate at the quantile: ``-dQ(s) / d log s``.
 
@@ -268,7 +272,7 @@ class Distribution(ABC):
 
         Notes
         -----
-        Where the two are far apart the default subtracts them (their shortfalls, for a bounded family). Where
+        Where the two are far apart the default subtracts them, or their shortfalls if these are less. Where
         they are near it integrates the slope of ``log Q`` over the log odds of s, in which that slope is
         smooth at both ends: its mean over the way is a Chebyshev series whose coefficients depend on `s`
         alone. A higher value beyond the least float's quantile is taken at that quantile.
@@ -278,11 +282,10 @@ class Distribution(ABC):
         higher_at = np.maximum(s * np.exp(-log_ratio), _LEAST)
         with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
             way = np.log1p(s * -np.expm1(-log_ratio) / (rest + _LEAST)) + log_ratio
-            higher = self.upper_quantile(higher_at)
-            if math.isfinite(self.support[1]):
-                drop = np.asarray((self.shortfall(s) - self.shortfall(higher_at)) / higher)
-            else:
-                drop = np.asarray(1.0 - self.upper_quantile(s) / higher)
+            higher, least_shortfall = self.two_ends(higher_at)
+            lower, shortfall = self.two_ends(s)
+            gap = np.where(shortfall < lower, shortfall - least_shortfall, higher - lower)
+            drop = np.asarray(gap / higher)
         near = way < _NEAR
         if near.any():
             nodes, weights = _mean_of_way()
