@@ -55,7 +55,7 @@ class Beta(Distribution):
 
     def upper_quantile(self, s: Floats) -> Floats:
         """Value exceeded with probability `s`."""
-        return self._high * self._part(np.asarray(s))
+        return self.two_ends(s)[0]
 
     def lower_quantile(self, u: Floats) -> Floats:
         """Value not exceeded with probability `u`, to the last digits where it vanishes."""
@@ -64,6 +64,11 @@ class Beta(Distribution):
     def shortfall(self, s: Floats) -> Floats:
         """Upper end minus ``Q(s)``."""
         return self._high * _inverse(np.asarray(s), self._b, self._a)
+
+    def two_ends(self, s: Floats) -> tuple[Floats, Floats]:
+        """``Q(s)`` and its shortfall, each with its own digits."""
+        part, left = self._ends(np.asarray(s))
+        return self._high * part, self._high * left
 
     def survival(self, x: Floats) -> Floats:
         """P(value > x), with the digits of x where x nears the upper end."""
@@ -94,26 +99,33 @@ class Beta(Distribution):
 
     def inverse_hazard(self, s: Floats) -> Floats:
         """``s / density(Q(s))``, with the shortfall's own digits near the upper end."""
-        s = np.asarray(s)
-        log_density = self._log_density(self._part(s), _inverse(s, self._b, self._a))
+        log_density = self._log_density(*self._ends(np.asarray(s)))
         with np.errstate(over="ignore"):
             return self._high * np.exp(np.log(s) - log_density)
 
-    def _part(self, s: Floats) -> Floats:
-        """Return the quantile as a part of the range, from whichever end is near."""
-        high_side = s < _HIGH_SIDE
-        part = np.where(high_side, 0.0, _inverse(np.where(high_side, 0.5, 1.0 - s), self._a, self._b))
-        if high_side.any():
-            part[high_side] = 1.0 - _inverse(s[high_side], self._b, self._a)
-        return part
+    def _ends(self, s: Floats) -> tuple[Floats, Floats]:
+        """Return the quantile and its shortfall as parts of the range, found from whichever end is near."""
+        part, left = np.empty_like(s), np.empty_like(s)
+        upper = s < 0.5  # noqa: PLR2004
+        left[upper] = _inverse(s[upper], self._b, self._a)
+        part[upper] = 1.0 - left[upper]
+        part[~upper] = _inverse(1.0 - s[~upper], self._a, self._b)
+        left[~upper] = 1.0 - part[~upper]
+        again = upper & (left > _FAR_SIDE) & (s > _OWN_SIDE)
+        part[again] = _inverse(1.0 - s[again], self._a, self._b)
+        again = ~upper & (part > _FAR_SIDE)
+        left[again] = _inverse(s[again], self._b, self._a)
+        return part, left
 
     def _log_density(self, part: Floats, left: Floats) -> Floats:
         """Log density on [0, 1] at `part`, whose distance to 1 is `left`."""
         return np.asarray(xlogy(self._a - 1.0, part) + xlogy(self._b - 1.0, left) - betaln(self._a, self._b))
 
 
-_HIGH_SIDE = 1e-3
-"""Upper-tail probability below which the value is the upper end less its shortfall."""
+_FAR_SIDE = 0.9
+"""Relative distance to the nearer end above which the other end is computed by itself."""
+_OWN_SIDE = 1e-3
+"""Upper-tail probability below which 1 - s has lost too much to do so."""
 _DEEP = 1e-20
 """Probability below which scipy's inverse is corrected."""
 _DEEPEST = 1e-300

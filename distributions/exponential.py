@@ -56,6 +56,10 @@ class Exponential(Distribution):
         """From 0 without end."""
         return 0.0, np.inf
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: constant."""
+        return np.full(np.shape(s), self._scale)
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``: ``d / (L + d)``."""
         return log_ratio / ((_LEAST - np.log(s)) + log_ratio)

@@ -85,6 +85,11 @@ class GeneralisedPareto(Distribution):
             return np.full(np.shape(s), np.inf)
         return self._high * np.power(s, -self._xi)
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: ``scale s^(-tail_index)``."""
+        with np.errstate(over="ignore"):
+            return self._scale * np.power(s, -self._xi)
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``."""
         rate = abs(self._xi)

@@ -70,6 +70,10 @@ class Pareto(Distribution):
         """The tail index itself."""
         return self._xi
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: ``tail_index Q(s)``."""
+        return self._xi * self.upper_quantile(s)
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``: ``1 - e^(-xi d)``, a read-only view where `s` is wider."""
         drop = 0.0 - np.expm1(-self._xi * np.asarray(log_ratio))

@@ -77,6 +77,12 @@ class Power(Distribution):
         with np.errstate(divide="ignore"):
             return -self._high * np.expm1(np.log1p(-s) / self._exponent)
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: ``high s (1 - s)^(1/exponent - 1) / exponent``."""
+        with np.errstate(divide="ignore"):
+            steepness = np.power(1.0 - s, 1.0 / self._exponent - 1.0)
+        return self._high / self._exponent * s * steepness
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``: ``1 - (1 + gap / (1 - s))^(-1/exponent)``."""
         gap = s * -np.expm1(-log_ratio)

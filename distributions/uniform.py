@@ -76,6 +76,10 @@ class Uniform(Distribution):
         """Upper end minus ``Q(s)``."""
         return self._width * s
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: the shortfall."""
+        return self._width * s
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``: ``gap / (Q(s) / width + gap)``."""
         gap = s * -np.expm1(-log_ratio)

@@ -68,6 +68,12 @@ class Weibull(Distribution):
         """From 0 without end."""
         return 0.0, np.inf
 
+    def inverse_hazard(self, s: Floats) -> Floats:
+        """``s / density(Q(s))``: ``scale L^(1/shape - 1) / shape``."""
+        with np.errstate(divide="ignore", over="ignore"):
+            steepness = np.power(0.0 - np.log(s), 1.0 / self._shape - 1.0)
+        return self._scale / self._shape * steepness
+
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``: ``1 - (1 + d / L)^(-1/shape)``."""
         with np.errstate(over="ignore"):
