@@ -9,7 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from mechbench import discovery
-from mechbench.contract import MEASURES, InputError, Mechanism
+from mechbench.contract import MEASURES, MONEY, InputError, Mechanism
 from mechbench.market.file import (
     FamilyChoice,
     LogChoice,
@@ -144,6 +144,13 @@ class TestWhatIsRead:
         for side in ("at_most", "at_least"):
             text = f"{SMALL}[requirements]\n{measure} = {{ {side} = 0.5 }}"
             assert read_market(written(tmp_path, text)).requirements == (Requirement(measure, **{side: 0.5}),)
+
+    @pytest.mark.parametrize("measure", sorted(MONEY))
+    def test_money_may_exceed_one(self, tmp_path, measure):
+        """A requirement on money is an amount, not a share."""
+        text = f"{SMALL}[requirements]\n{measure} = {{ at_least = 5000 }}"
+        (bound,) = read_market(written(tmp_path, text)).requirements
+        assert bound == Requirement(measure, at_least=5000.0)
 
     def test_market_of_one_size(self, tmp_path):
         """The market built for a size of the path has that size's units, the reserve and the turnout."""

@@ -22,7 +22,6 @@ if TYPE_CHECKING:
 
 __all__ = ["market_words"]
 
-_MARKS = ("given", "default", "fitted")
 _Piece = tuple[str, str]
 """Some words, and the mark that speaks for their figures; "" for words without a figure."""
 
@@ -92,13 +91,12 @@ def _values(file: MarketFile, values: Distribution) -> list[_Piece]:
 
 def _reserve(file: MarketFile, values: Distribution) -> list[_Piece]:
     reserve = file.supply.reserve
-    mark = _mark(file, "supply.reserve")
     if reserve == 0:
-        return [("Reserve: none", mark)]
+        return [("Reserve: none", _mark(file, "supply.reserve"))]
     share = float(values.survival(np.array([reserve]))[0])
     return [
-        (f"Reserve: {_currency(file, number_words(reserve))} a unit", mark),
-        (f"; {_rounded(100 * share)} % of the values are above it", max(mark, _values_mark(file), key=_rank)),
+        (f"Reserve: {_currency(file, number_words(reserve))} a unit", "given"),
+        (f"; {_rounded(100 * share)} % of the values are above it", _values_mark(file)),
     ]
 
 
@@ -146,11 +144,8 @@ def _values_mark(file: MarketFile) -> str:
     """Return the mark of what is worked out from the law of the values."""
     if not isinstance(file.values, FamilyChoice):
         return "fitted"
-    return max((_mark(file, f"values.{name}") for name in file.values.settings), key=_rank, default="given")
-
-
-def _rank(mark: str) -> int:
-    return _MARKS.index(mark)
+    given = all(f"values.{name}" in file.given for name in file.values.settings)
+    return "given" if given else "default"
 
 
 def _marked(pieces: Sequence[_Piece]) -> str:
