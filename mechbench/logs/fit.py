@@ -66,7 +66,7 @@ def fit_log(log: BidLog) -> Fit:
 
     The threshold stands half-way between the two bids that the threshold rule parts.
     """
-    return _fit(log, log.weights.astype(np.float64))
+    return _fit(log, log.weights.astype(np.float64), discovery.family_class("empirical"))
 
 
 def resampled_fits(log: BidLog, count: int, rng: np.random.Generator) -> Iterator[Fit]:
@@ -74,8 +74,9 @@ def resampled_fits(log: BidLog, count: int, rng: np.random.Generator) -> Iterato
 
     Whole auctions are drawn where the log tells them apart: bids of one night are seldom independent.
     """
+    family = discovery.family_class("empirical")
     for _ in range(count):
-        yield _fit(log, _resampled_weights(log, rng))
+        yield _fit(log, _resampled_weights(log, rng), family)
 
 
 def log_interval(point: float, resampled: Sequence[float] | Floats) -> tuple[float, float, float]:
@@ -113,7 +114,7 @@ def depends_on_tail(bids: int, market: Market) -> str | None:
     )
 
 
-def _fit(log: BidLog, weights: Floats) -> Fit:
+def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
     reached = np.cumsum(weights)
     total = reached[-1]
     tail_share = _tail_share(log.bids)
@@ -141,7 +142,7 @@ def _fit(log: BidLog, weights: Floats) -> Fit:
         "levels": tuple(plan.levels[:-1].tolist()),
         "reciprocal_hazards": tuple(slopes.tolist()),
     }
-    values = discovery.family_class("empirical")(**settings)
+    values = family(**settings)
     exceedances = round(total * tail_share)
     return Fit(
         values, round(total), threshold, exceedances, tail.index, tail.index_error, tail.scale, log.notes
