@@ -161,7 +161,7 @@ class Empirical(Distribution):
         return body - self._scale / self._index * np.exp(self._index * np.maximum(scale - self._end, 0.0))
 
     def inverse_hazard(self, s: Floats) -> Floats:
-        """``-dQ(s) / d log s``: what the settings give at the levels, straight lines and a power in between."""
+        """``-dQ(s) / d log s``: as set at the levels, straight between them, a power beyond."""
         return self._slope(0.0 - np.log(s))
 
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
