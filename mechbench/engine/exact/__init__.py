@@ -1,0 +1,1 @@
+"""Measures by quadrature over order statistics, with error bounds."""

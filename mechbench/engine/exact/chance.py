@@ -1,0 +1,122 @@
+"""The chance that a gain exceeds a level, from the functional of the worst gain."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from mechbench.contract import Floats, Functional
+from mechbench.engine.exact.rules import bound
+from mechbench.engine.exact.sizes import Sizes
+from mechbench.engine.exact.units import NoRouteError, Resolution, SlackDraws, contested_nodes
+from mechbench.engine.exact.winners import Place, Ranked
+
+__all__ = ["chance_above"]
+
+_FURTHEST = 640.0
+"""Log ratio that stands for "as high as values go"; tail probabilities stay representable."""
+
+
+def chance_above(
+    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
+) -> tuple[Floats, Floats]:
+    """P(the amount exceeds `level` and something is sold) and a bound on its error, arrays (cells,).
+
+    The amount rises with the winner it runs over, so in each draw it exceeds the level when that winner sits
+    beyond one log ratio from the threshold, which is found by bisection.
+
+    Raises
+    ------
+    NoRouteError
+        If the functional runs over anything but the best or the lowest winner.
+    """
+    if functional.over not in {"best", "lowest"}:
+        msg = "the chance of a gain needs a gain of the best or of the lowest winner"
+        raise NoRouteError(msg)
+    value, error = _contested(sizes, functional, level, resolution)
+    if sizes.chance < 1.0:
+        more, more_error = _slack(sizes, functional, level, resolution)
+        value, error = value + more, error + more_error
+    return value, error
+
+
+def _amount(functional: Functional, place: Place, share: float, ratio: Floats) -> Floats:
+    if functional.over == "best":
+        return functional.amount(Ranked(place, share, winner=ratio))
+    return functional.amount(Ranked(place, share, lowest=ratio))
+
+
+def _bisect(passed: Callable[[Floats], Floats], low: Floats, high: Floats, steps: int = 56) -> Floats:
+    """Point where a rising condition starts to hold, between `low` (not yet) and `high`."""
+    for _ in range(steps):
+        middle = 0.5 * (low + high)
+        holds = passed(middle)
+        low, high = np.where(holds, low, middle), np.where(holds, middle, high)
+    return high
+
+
+def _ratio_at(functional: Functional, place: Place, share: float, level: float) -> Floats:
+    """Log ratio beyond which the amount exceeds the level; inf where it never does."""
+
+    def passed(log_of_ratio: Floats) -> Floats:
+        return _amount(functional, place, share, np.exp(log_of_ratio)) > level
+
+    low = np.full(place.at.shape, np.log(1e-18))
+    high = np.full(place.at.shape, np.log(_FURTHEST))
+    ratio = np.exp(_bisect(passed, low, high))
+    reaches = passed(high)
+    at_once = passed(low)
+    return np.where(at_once, 0.0, np.where(reaches, ratio, np.inf))
+
+
+def _contested(
+    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
+) -> tuple[Floats, Floats]:
+    rank = sizes.units + 1.0
+    value, error = np.zeros_like(rank), np.zeros_like(rank)
+    for nodes in contested_nodes(sizes, rank, 0.0, resolution, _first_reach(sizes, functional, level)):
+        ratio = _ratio_at(functional, nodes.place, 1.0, level)
+        units = sizes.units[:, None]
+        if functional.over == "best":
+            with np.errstate(divide="ignore"):
+                chance = -np.expm1(units * np.log1p(-np.exp(-ratio)))
+        else:
+            chance = np.exp(-units * ratio)
+        sums = (chance[:, None, :] @ nodes.weights)[:, 0, :]
+        value, error = value + sums[:, 0], error + bound(*sums.T, np.abs(sums[:, 0]))
+    return value, error
+
+
+def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats | None:
+    """Log-odds of the threshold below which no winner, however high, exceeds the level; None if there is none."""
+    law = sizes.law(sizes.units + 1.0)
+    low, high = law.reach(0.0)
+
+    def passed(y: Floats) -> Floats:
+        s, rest, _ = law.at(y[:, None])
+        place = sizes.place(s, rest)
+        return _amount(functional, place, 1.0, np.full(s.shape, _FURTHEST))[:, 0] > level
+
+    if passed(low).all():
+        return None
+    return _bisect(passed, low, high)
+
+
+def _slack(
+    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
+) -> tuple[Floats, Floats]:
+    floor, share = sizes.floor
+    place = Place(sizes.values, floor.at[:, None], floor.rest[:, None])
+    draws = SlackDraws(sizes, place, share, resolution)
+    ratio = float(_ratio_at(functional, floor, share, level)[0])
+    if np.isinf(ratio):
+        return np.zeros_like(sizes.units), np.zeros_like(sizes.units)
+    counted = Functional(functional.over, functional.uses, lambda _: np.ones((1, 1)))
+    if functional.over == "best":
+        edge = -sizes.bidders * np.log1p(-sizes.chance * np.exp(-ratio)) if ratio > 0 else draws.end
+        draws.stop = np.minimum(draws.stop, edge)
+        return draws.best(counted)
+    edge = -sizes.bidders * np.log1p(sizes.chance * np.expm1(-ratio))
+    draws.start = np.minimum(edge, draws.stop)
+    return draws.lowest(counted)

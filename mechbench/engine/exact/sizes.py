@@ -1,0 +1,106 @@
+"""Many sizes of one market at once: what the exact integrals need to know of the crowd."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from mechbench.contract import Distribution, Floats
+from mechbench.engine.exact.order import OrderLaw, at_least_one
+from mechbench.engine.exact.winners import Place
+from mechbench.market.market import Market
+
+__all__ = ["Sizes"]
+
+
+@dataclass(frozen=True)
+class Sizes:
+    """Markets that differ in size alone, so that their integrals share every call.
+
+    Attributes
+    ----------
+    values : Distribution
+    turnout, reserve : float
+    bidders, units : arrays (cells,)
+    """
+
+    values: Distribution
+    turnout: float
+    reserve: float
+    bidders: Floats
+    units: Floats
+
+    @classmethod
+    def of(cls, markets: Sequence[Market]) -> Sizes:
+        """Gather markets of one family, turnout and reserve."""
+        first = markets[0]
+        return cls(
+            first.values,
+            first.turnout,
+            first.supply.reserve,
+            np.array([float(market.bidders) for market in markets]),
+            np.array([float(market.supply.units) for market in markets]),
+        )
+
+    @cached_property
+    def eligible(self) -> tuple[float, float]:
+        """P(a bid is at least the reserve) among those who turn up, and its complement."""
+        if self.reserve <= self.values.support[0]:
+            return 1.0, 0.0
+        reserve = np.array([self.reserve])
+        return float(self.values.survival(reserve)[0]), float(self.values.cumulative(reserve)[0])
+
+    @cached_property
+    def chance(self) -> float:
+        """P(a bidder turns up and bids at least the reserve)."""
+        return self.turnout * self.eligible[0]
+
+    @cached_property
+    def chance_not(self) -> float:
+        """The complement of `chance`, with its own digits."""
+        return (1.0 - self.turnout) + self.turnout * self.eligible[1]
+
+    @cached_property
+    def floor(self) -> tuple[Place, float]:
+        """The lowest bid that can win, and the reserve as a share of it (0 where there is no reserve)."""
+        at, rest = self.eligible
+        place = Place(self.values, np.array([at]), np.array([rest]))
+        low = self.values.support[0]
+        if self.reserve == 0:
+            return place, 0.0
+        return place, (self.reserve / low if self.reserve <= low else 1.0)
+
+    @cached_property
+    def knots(self) -> list[float]:
+        """Tail probabilities of the family's knots above the reserve, rising."""
+        return sorted(knot for knot in self.values.knots if knot < self.eligible[0])
+
+    @cached_property
+    def sale(self) -> Floats:
+        """P(at least one unit is sold), array (cells,)."""
+        return at_least_one(self.bidders, np.array(self.chance), np.array(self.chance_not))
+
+    def law(self, rank: Floats) -> OrderLaw:
+        """Law of the rank-th smallest tail probability of all who may turn up."""
+        return OrderLaw(rank, self.bidders)
+
+    def place(self, s: Floats, rest: Floats, to_floor: Floats | None = None) -> Place:
+        """Place of a bid with tail probability `s` among all who may turn up.
+
+        Parameters
+        ----------
+        s, rest : arrays
+            The tail probability and its complement.
+        to_floor : array, optional
+            ``chance - s`` with its own digits, for places near the cut at the reserve.
+        """
+        if self.turnout == 1 and to_floor is None:
+            return Place(self.values, s, rest)
+        if to_floor is None:
+            bottom = np.maximum(self.turnout - s, 0.0) / self.turnout
+        else:
+            bottom = self.eligible[1] + to_floor / self.turnout
+        return Place(self.values, np.minimum(s / self.turnout, 1.0), np.minimum(bottom, 1.0))
