@@ -24,7 +24,7 @@ Sources
 from __future__ import annotations
 
 import numpy as np
-from scipy.special import betainc, betaincinv, betaln, xlogy
+from scipy.special import betainc, betaincc, betaincinv, betaln, xlogy
 
 from mechbench.contract import Distribution, Floats, Parameter
 
@@ -52,6 +52,7 @@ class Beta(Distribution):
     def prepare(self) -> None:
         """Read the settings."""
         self._a, self._b, self._high = self.number("a"), self.number("b"), self.number("high")
+        self.smooth_over = 0.5 * min(1.0, self._a, self._b)
 
     def upper_quantile(self, s: Floats) -> Floats:
         """Value exceeded with probability `s`."""
@@ -72,8 +73,10 @@ class Beta(Distribution):
 
     def survival(self, x: Floats) -> Floats:
         """P(value > x), with the digits of x where x nears the upper end."""
+        part = np.clip(np.asarray(x) / self._high, 0.0, 1.0)
         left = np.clip((self._high - np.asarray(x)) / self._high, 0.0, 1.0)
-        return np.asarray(betainc(self._b, self._a, left))
+        near = part > 0.5  # noqa: PLR2004
+        return np.where(near, betainc(self._b, self._a, left), betaincc(self._a, self._b, part))
 
     def cumulative(self, x: Floats) -> Floats:
         """P(value <= x)."""

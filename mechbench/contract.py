@@ -180,6 +180,9 @@ class Distribution(ABC):
     from_log: ClassVar[bool] = False
     """True for a family that is fitted to a bid log and cannot be given by hand."""
 
+    smooth_over: float = 0.5
+    """Distance in log odds of s over which ten terms catch ``log Q``; less for a family with steep ends."""
+
     def __init__(self, **settings: Setting) -> None:
         self.settings: dict[str, Setting] = dict(
             checked_settings(self.parameters, settings, f"family {self.name}")
@@ -241,8 +244,9 @@ class Distribution(ABC):
         return self.upper_quantile(1.0 - u)
 
     def shortfall(self, s: Floats) -> Floats:
-        """Upper end minus ``Q(s)`` of a bounded family; override to keep the digits at small s."""
-        return self.support[1] - self.upper_quantile(s)
+        """Upper end minus ``Q(s)``, ``inf`` without an end; override to keep the digits at small s."""
+        high = self.support[1]
+        return high - self.upper_quantile(s) if math.isfinite(high) else np.full(np.shape(s), math.inf)
 
     def two_ends(self, s: Floats) -> tuple[Floats, Floats]:
         """``Q(s)`` and its shortfall; override where finding both at once saves work."""
@@ -273,45 +277,61 @@ class Distribution(ABC):
         Notes
         -----
         Where the two are far apart the default subtracts them, or their shortfalls if these are less. Where
-        they are near it integrates the slope of ``log Q`` over the log odds of s, in which that slope is
-        smooth at both ends: its mean over the way is a Chebyshev series whose coefficients depend on `s`
-        alone. A higher value beyond the least float's quantile is taken at that quantile.
+        they are near it integrates the slope of the lesser one's logarithm over the log odds of s, in which
+        that slope is smooth at both ends: its mean over the way is a Chebyshev series whose coefficients
+        depend on `s` alone. A probability of the higher value below 1e-322 is taken as that.
         """
         s, log_ratio = np.asarray(s, dtype=np.float64), np.asarray(log_ratio, dtype=np.float64)
-        rest = 1.0 - s
-        higher_at = np.maximum(s * np.exp(-log_ratio), _LEAST)
+        higher_at = np.maximum(s * np.exp(-log_ratio), _LEAST_AT)
+        rest, gap = 1.0 - s, s * -np.expm1(-log_ratio)
         with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
-            way = np.log1p(s * -np.expm1(-log_ratio) / (rest + _LEAST)) + log_ratio
-            higher, least_shortfall = self.two_ends(higher_at)
-            lower, shortfall = self.two_ends(s)
-            gap = np.where(shortfall < lower, shortfall - least_shortfall, higher - lower)
-            drop = np.asarray(gap / higher)
-        near = way < _NEAR
-        if near.any():
-            nodes, weights = _mean_of_way()
-            slope = self._log_slope(np.minimum(s, _BELOW_ONE)[..., None], _NEAR * nodes)
-            series = np.broadcast_to(slope @ weights, (*near.shape, nodes.size))[near]
-            mean = np.polynomial.chebyshev.chebval(2.0 / _NEAR * way[near] - 1.0, series.T, tensor=False)
-            drop[near] = -np.expm1(-way[near] * mean)
+            way = np.log1p(gap / (rest + _LEAST)) + log_ratio
+            higher, least_shortfall = self._ends_at(higher_at, rest + gap)
+            lower, shortfall = self._ends_at(s, rest)
+            by_end = shortfall < lower
+            drop = np.asarray(np.where(by_end, shortfall - least_shortfall, higher - lower) / higher)
+            near = way < self.smooth_over
+            if near.any():
+                nodes, weights = _mean_of_way()
+                slope = self._log_slope(
+                    np.minimum(s, _BELOW_ONE)[..., None], self.smooth_over * nodes, by_end
+                )
+                series = np.broadcast_to(slope @ weights, (*near.shape, nodes.size))[near]
+                mean = np.polynomial.chebyshev.chebval(
+                    2.0 / self.smooth_over * way[near] - 1.0, series.T, tensor=False
+                )
+                base = np.where(by_end, shortfall / higher, 1.0)[near]
+                drop[near] = base * -np.expm1(-way[near] * mean)
         return drop
 
-    def _log_slope(self, s: Floats, way: Floats) -> Floats:
-        """Slope of ``log Q`` by the log odds of s, `way` further up; from whichever end is nearer."""
+    def _ends_at(self, s: Floats, rest: Floats) -> tuple[Floats, Floats]:
+        """`two_ends` at s, with the digits of ``rest = 1 - s`` near the lower end."""
+        value, shortfall = self.two_ends(s)
+        low = rest < _LOW
+        if low.any():
+            value, shortfall = np.array(value), np.array(shortfall)
+            value[low] = self.lower_quantile(rest[low])
+            shortfall[low] = self.support[1] - value[low]
+        return value, shortfall
+
+    def _log_slope(self, s: Floats, way: Floats, by_end: NDArray[np.bool_]) -> Floats:
+        """Slope of ``log Q``, or of the log shortfall where `by_end`, by the log odds, `way` further up."""
         risen = (1.0 - s) * np.exp(way)
         at, rest = s / (s + risen), risen / (s + risen)
-        slope = rest * self.inverse_hazard(at) / self.upper_quantile(at)
-        low = at > 0.5  # noqa: PLR2004
+        value, shortfall = self._ends_at(at, rest)
+        slope = rest * self.inverse_hazard(at)
+        low = rest < _LOW
         if low.any():
-            value = self.lower_quantile(rest[low])
-            slope[low] = at[low] * rest[low] / (value * self.density(value))
-        return slope
+            slope[low] = at[low] * rest[low] / self.density(value[low])
+        return slope / (np.where(by_end[..., None], shortfall, value) + _LEAST)
 
 
-_NEAR = 0.5
-"""Distance in log odds below which the default `relative_drop` integrates the slope."""
 _ORDER = 10
-"""Terms of its series: with the slope's nearest singularity about pi away, (8 pi)^-10 of it is left out."""
+"""Terms of its series: with the nearest singularity pi away, a way of 0.5 leaves out (8 pi)^-10."""
 _BELOW_ONE = 1.0 - 2.0**-53
+_LEAST_AT = 1e-322
+_LOW = 1e-3
+"""Lower-tail probability below which values are found from it: ``1 - s`` would carry an error of 1e-13."""
 _LEAST = 5e-324
 """The smallest float: added to what may be 0, it makes 0 / 0 a plain 0 and changes nothing else."""
 
