@@ -73,8 +73,9 @@ class Gamma(Distribution):
         """Probability density; infinite at 0 for a shape below 1."""
         x = np.asarray(x)
         inside = (x > 0) & (x < np.inf)
-        at = np.where(inside, x, self._scale)
-        height = np.where(inside, np.exp(self._log_mass(at / self._scale)) / at, 0.0)
+        at = np.where(inside, np.minimum(x, _NOTHING * self._shape * self._scale), self._scale)
+        with np.errstate(over="ignore"):
+            height = np.where(inside, np.exp(self._log_mass(at / self._scale)) / at, 0.0)
         at_zero = np.inf if self._shape < 1 else (1.0 / self._scale if self._shape == 1 else 0.0)
         return np.where(x == 0, at_zero, height)
 
@@ -93,6 +94,10 @@ class Gamma(Distribution):
         """``log(x density(x))`` at ``x = part * scale``."""
         t = part / self._shape
         return self._log_peak - self._shape * (t - 1.0 - np.log(t))
+
+
+_NOTHING = 1e10
+"""Beyond so many means the density is 0 in floats."""
 
 
 def _stirling_rest(a: float) -> float:

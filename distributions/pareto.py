@@ -58,7 +58,7 @@ class Pareto(Distribution):
     def density(self, x: Floats) -> Floats:
         """Probability density."""
         at = np.maximum(x, self._scale)
-        return np.where(np.asarray(x) < self._scale, 0.0, self.survival(at) / (self._xi * at))
+        return np.where(np.asarray(x) < self._scale, 0.0, self.survival(at) / at / self._xi)
 
     @property
     def support(self) -> tuple[float, float]:
