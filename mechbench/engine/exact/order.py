@@ -51,6 +51,11 @@ class OrderLaw:
         return self.rank / (self.count + 1.0)
 
     @property
+    def width(self) -> Floats:
+        """Standard deviation of the log-odds, about, for laws that are nearly normal there."""
+        return np.sqrt((self.count + 1.0) / (self.rank * self.above))
+
+    @property
     def slow_tail(self) -> Floats:
         """Which tail of the log-odds is far slower than the other: -1 the left, 1 the right, 0 neither."""
         return np.where(self.above >= 10.0 * self.rank, -1, np.where(self.rank >= 10.0 * self.above, 1, 0))

@@ -16,7 +16,7 @@ import numpy as np
 
 from mechbench.contract import Floats
 
-__all__ = ["EXPONENT", "bound", "decaying", "finite", "nested", "tame"]
+__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "tame"]
 
 EXPONENT = 34.0
 """Mass below ``exp(-34) = 2e-15`` of the peak is left out."""
@@ -87,6 +87,34 @@ def _tanh_sinh(nodes: int) -> tuple[Floats, Floats, Floats]:
     odds = np.exp(np.pi * np.sinh(grid))
     near, far = odds / (1.0 + odds), 1.0 / (1.0 + odds)
     return near, far, (grid[1] - grid[0]) * np.pi * np.cosh(grid) * near * far
+
+
+def cut_off(lo: Floats, hi: Floats, width: Floats, nodes: int) -> tuple[Floats, Floats]:
+    """Nodes on [lo, hi] for a bump of about the given width that may be cut off anywhere, in any way, at hi.
+
+    Doubly exponential towards `hi`, evenly spaced away from it.
+
+    Parameters
+    ----------
+    lo, hi, width : arrays (cells,)
+    nodes : int
+
+    Returns
+    -------
+    from_hi, weight : arrays (cells, nodes)
+        Distance of each node below `hi`, with all its digits.
+    """
+    span = np.maximum(hi - lo, 1e-300)
+    width = np.minimum(width, 0.3 * span)
+    # hi - y = width * softplus(t - exp(-t)); the last t is a bound, not an inverse
+    level = np.log(np.expm1(np.minimum(span / width, 700.0)))
+    stop = level + np.exp(-np.maximum(level, 0.0))
+    step = ((stop + 3.6) / (nodes - 1))[:, None]
+    grid = -3.6 + step * np.arange(nodes)
+    falling = np.exp(-grid)
+    bent = np.exp(grid - falling)
+    slope = bent / (1.0 + bent) * (1.0 + falling)
+    return width[:, None] * np.log1p(bent), width[:, None] * slope * step
 
 
 @lru_cache(maxsize=32)

@@ -18,13 +18,14 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
 from mechbench.contract import Floats, Functional
-from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.order import binomial_at_most, binomial_between
-from mechbench.engine.exact.rules import EXPONENT, bound, decaying, finite, nested, tame
+from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, tame
+from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.winners import Place, Ranked
 
 __all__ = ["Contested", "NoRouteError", "Resolution", "SlackDraws", "contested_nodes", "expectation"]
@@ -93,17 +94,22 @@ def contested_nodes(
         at = sizes.turnout * knot
         edges.append(np.clip(law.log_odds(at, 1.0 - at), lo, np.maximum(stop, lo)))
     edges.append(np.maximum(stop, lo))
-    for panel, (left, right) in enumerate(zip(edges[:-1], edges[1:], strict=True)):
+    last = len(edges) - 2
+    for panel, (left, right) in enumerate(pairwise(edges)):
         if (right <= left).all():
             continue
         # y = sinh t shortens the long exponential tails; the distance to the cut keeps its digits
         begin, end = np.arcsinh(left), np.arcsinh(right)
-        from_lo, from_hi, weight = finite(begin, end, resolution.cut)
-        t = np.where(from_lo < from_hi, begin[:, None] + from_lo, end[:, None] - from_hi)
+        if panel == last and start is None:
+            from_hi, weight = cut_off(begin, end, law.width, resolution.cut)
+            t = end[:, None] - from_hi
+        else:
+            from_lo, from_hi, weight = finite(begin, end, resolution.cut)
+            t = np.where(from_lo < from_hi, begin[:, None] + from_lo, end[:, None] - from_hi)
         s, rest, density = law.at(np.sinh(t))
-        weight = weight * np.cosh(t)
+        weight = weight * np.cosh(t) * (right > left)[:, None]
         to_floor = None
-        if sizes.chance_not > 0 and panel == len(edges) - 2:
+        if sizes.chance_not > 0 and panel == last:
             to_end = 2.0 * np.cosh(end[:, None] - 0.5 * from_hi) * np.sinh(0.5 * from_hi)
             to_cut = np.minimum((cut - right)[:, None] + to_end, 700.0)
             to_floor = sizes.chance * rest * -np.expm1(-to_cut)
@@ -365,7 +371,7 @@ class SlackDraws:
     def _panels(self, knots_at: list[Floats]) -> Iterator[tuple[Floats, Floats, Floats]]:
         """Exponential nodes, their distance to the end and nested weights, panel by panel between knots (cells,)."""
         edges = [self.start, *(np.clip(knot, self.start, self.stop) for knot in knots_at), self.stop]
-        for left, right in zip(edges[:-1], edges[1:], strict=True):
+        for left, right in pairwise(edges):
             from_left, from_right, weight = finite(left, right, self.resolution.slack)
             at = left[:, None] + from_left
             to_end = (self.end - right)[:, None] + from_right
