@@ -395,3 +395,28 @@ def test_f_points_are_the_tables() -> None:
         shortfall = family.shortfall(np.array([0.05]))[0]
         assert abs(n * value / (m * shortfall) - point) <= 0.0005
         assert abs(mp.betainc(m / 2, n / 2, m * point / (m * point + n), 1, regularized=True) - 0.05) < 1e-4
+
+
+DECLARED = {
+    "uniform": {"low": (0.0, -1), "high": (1.0, 0)},
+    "power": {"exponent": (None, 0), "high": (1.0, 0)},
+    "beta": {"a": (None, 0.05), "b": (None, 0.05), "high": (1.0, 0)},
+    "exponential": {"scale": (1.0, 0)},
+    "weibull": {"shape": (None, 0), "scale": (1.0, 0)},
+    "gamma": {"shape": (None, 0.01), "scale": (1.0, 0)},
+    "half-normal": {"scale": (1.0, 0)},
+    "lognormal": {"sigma": (None, 16), "scale": (1.0, 0)},
+    "pareto": {"tail_index": (None, 0), "scale": (1.0, 0)},
+    "generalised-pareto": {"tail_index": (None, math.inf), "scale": (1.0, 0)},
+}
+"""The fixed parameters of each family: default, and a value that must be refused."""
+
+
+@pytest.mark.parametrize("name", sorted(DECLARED))
+def test_fixed_parameters_defaults_and_domains(name: str) -> None:
+    """Each family has its fixed parameters with their defaults, and refuses what its mathematics forbids."""
+    parameters = family_class(name).parameters
+    assert {p.name: p.default for p in parameters} == {key: pair[0] for key, pair in DECLARED[name].items()}
+    for parameter in parameters:
+        with pytest.raises(InputError, match=f"family {name}: {parameter.name} is .*; accepted is"):
+            parameter.check(DECLARED[name][parameter.name][1], f"family {name}")
