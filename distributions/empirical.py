@@ -86,6 +86,8 @@ class Empirical(Distribution):
         levels = np.append(np.asarray(self.settings["levels"], dtype=np.float64), share)
         slopes = np.append(np.asarray(self.settings["reciprocal_hazards"], dtype=np.float64), self._scale)
         self._check(levels, slopes)
+        if abs(self._index) < _NO_INDEX:
+            self._index = 0.0
         self._knots = tuple(levels[1:].tolist())
         self._starts = 0.0 - np.log(levels)
         steps = np.diff(self._starts)
@@ -98,6 +100,10 @@ class Empirical(Distribution):
         self._curves = np.diff(slopes) / (2 * steps)
         self._end = self._starts[-1]
         self._steps = steps
+        self._furthest = _LEAST_SHARE
+        if self._index > 0:
+            in_floats = self._end + (_LARGEST + math.log(self._index / self._scale)) / self._index
+            self._furthest = min(_LEAST_SHARE, in_floats)
 
     def _check(self, levels: Floats, slopes: Floats) -> None:
         """Refuse settings that make no law."""
@@ -166,13 +172,13 @@ class Empirical(Distribution):
 
     def relative_drop(self, s: Floats, log_ratio: Floats) -> Floats:
         """``1 - Q(s) / Q(s * exp(-log_ratio))``, small ones by steps along the spline."""
-        lower = 0.0 - np.log(s)
-        higher_value = self._quantile(lower + log_ratio)
+        lower = np.minimum(0.0 - np.log(s), self._furthest)
+        higher_value = self._quantile(np.minimum(lower + log_ratio, self._furthest))
         drop = higher_value - self._quantile(lower)
         near = drop < _NEAR * higher_value
         if near.any():
             lower, step = (np.broadcast_to(part, drop.shape)[near] for part in (lower, log_ratio))
-            drop[near] = self._rise(lower, step)
+            drop[near] = self._rise(lower, np.minimum(step, self._furthest - lower))
         return drop / (higher_value + _LEAST)
 
     def _piece(self, at: Floats) -> tuple[np.ndarray, Floats]:
@@ -233,7 +239,8 @@ class Empirical(Distribution):
         if self._index == 0:
             return body + excess
         with np.errstate(divide="ignore"):
-            return body + np.log1p(np.maximum(self._index * excess, -1.0)) / self._index
+            beyond = np.log1p(np.maximum(self._index * excess, -1.0)) / self._index
+        return body + (beyond if self._index > 0 else np.where(x < self.support[1], beyond, math.inf))
 
     def _rise(self, lower: Floats, step: Floats) -> Floats:
         """``Q(E + step) - Q(E)`` as a sum of positive parts, arrays (nodes,)."""
@@ -258,7 +265,13 @@ def _refuse(name: str, found: object, accepted: str) -> None:
 
 _ROUNDING = 1e-12
 """Share of the threshold by which a lower end of 0 may come out below 0 for rounding alone."""
+_NO_INDEX = 1e-16
+"""Size of the tail index below which the tail is exponential to the last digit."""
 _NEAR = 1e-3
 """Relative drop below which a difference of quantiles would lose more than 3 digits."""
+_LEAST_SHARE = 744.0
+"""E of the least float: relative drops from beyond it are taken from there."""
+_LARGEST = 709.0
+"""Logarithm of the largest float, rounded down: relative drops stop short of values beyond it."""
 _LEAST = 5e-324
 """The smallest float: added to what may be 0, it makes 0 / 0 a plain 0 and changes nothing else."""

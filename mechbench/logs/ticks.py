@@ -1,9 +1,9 @@
 """The tick of a log, and tied bids spread over it.
 
 Bids are written to a tick: whole euros, cents, fives. Where many bids tie, a bid stands for all values that
-round to it. The tick is the largest of 1, 2, 2.5 and 5 times a power of ten that at least nine in ten of the
-different bids are multiples of (different ones, lest a single popular bid be taken for a tick); m equal bids
-on the tick are spread evenly over one tick around their value.
+round to it. The tick is the largest of 1, 2, 2.5 and 5 times a power of ten that at least nine in ten bids
+are multiples of, where no single value counts for more than one bid in fifty (a popular bid is no tick); m
+equal bids on the tick are spread evenly over one tick around their value.
 """
 
 from __future__ import annotations
@@ -25,20 +25,20 @@ def tied_share(ordered: Floats) -> float:
 
 
 def find_tick(bids: Floats) -> float:
-    """Largest tick that nine in ten of the different bids keep, or 0 if there is none.
+    """Largest tick that nine in ten bids keep, or 0 if there is none.
 
     Parameters
     ----------
     bids : array (bids,)
-        Bids above 0; of many different ones some thousands are looked at.
+        Bids above 0 in rising order; of many some thousands are looked at.
     """
-    different = np.unique(bids)
-    looked_at = different[:: max(1, different.size // _LOOKED_AT)]
+    looked_at, count = np.unique(bids[:: max(1, bids.size // _LOOKED_AT)], return_counts=True)
+    weight = np.minimum(count, max(1.0, count.sum() * _POPULAR))
     middle = float(np.median(looked_at))
     for power in range(math.floor(math.log10(middle)) + 1, math.floor(math.log10(middle)) - _DIGITS, -1):
         for step in (5.0, 2.5, 2.0, 1.0):
             tick = step * 10.0**power
-            if _on(looked_at, tick).mean() >= _KEEP_IT:
+            if _on(looked_at, tick) @ weight >= _KEEP_IT * weight.sum():
                 return tick
     return 0.0
 
@@ -75,6 +75,7 @@ def _on(bids: Floats, tick: float) -> np.ndarray:
 
 _LOOKED_AT = 20_000
 _KEEP_IT = 0.9
+_POPULAR = 0.02
 _DIGITS = 7
 """How many decimal digits below the median bid a tick may be; finer ones tie nothing."""
 _ROUNDING = 1e-9
