@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -85,16 +85,40 @@ def log_interval(point: float, resampled: Sequence[float] | Floats) -> tuple[flo
     Parameters
     ----------
     point : float
-        The number from the log itself.
+        The number from the log itself, >= 0.
     resampled : sequence of float
-        The same number from `resampled_fits`.
+        The same number from each of `resampled_fits`.
 
     Returns
     -------
-    low, high, half_width : float
+    low, high : float
+        1.96 root mean square deviations of the resampled numbers from the point, to either side, on the scale
+        of logarithms: ``point * exp(+-1.96 rms)``. Deviations from the point rather than from their mean let
+        the interval answer for the bootstrap's own bias. Where a number is 0 the scale is the plain one.
+    half_width : float
+        Half of ``high - low``. Infinite, like `high`, if a resampled number is infinite.
+
+    Raises
+    ------
+    ValueError
+        If there are fewer than two resampled numbers.
     """
-    half = float(np.quantile(np.abs(np.asarray(resampled) - point), 0.95))
-    return point - half, point + half, half
+    others = np.asarray(resampled, dtype=np.float64)
+    if others.size < 2:  # noqa: PLR2004
+        msg = f"an interval needs at least 2 resampled numbers, not {others.size}"
+        raise ValueError(msg)
+    finite = others[np.isfinite(others)]
+    if math.isinf(point) or finite.size == 0:
+        return 0.0, math.inf, math.inf
+    if point > 0 and (finite > 0).all():
+        spread = math.exp(_NORMAL * math.sqrt(float(np.mean(np.log(finite / point) ** 2))))
+        low, high = point / spread, point * spread
+    else:
+        reach = _NORMAL * math.sqrt(float(np.mean((finite - point) ** 2)))
+        low, high = max(point - reach, 0.0), point + reach
+    if finite.size < others.size:
+        high = math.inf
+    return low, high, (high - low) / 2
 
 
 def depends_on_tail(bids: int, market: Market) -> str | None:
@@ -127,6 +151,7 @@ def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
     tail_weights[0] = reached[first] - cut
     there = tail_weights > 0
     tail = fit_tail(excesses[there], tail_weights[there])
+    tail = replace(tail, scale=max(tail.scale, _LEAST_SCALE * threshold))
     plan = body_plan(tail_share)
     if tail.scale * math.log(plan.levels[-2] / tail_share) > threshold:
         plan = body_plan(tail_share, threshold / (2.0 * tail.scale))
@@ -166,8 +191,12 @@ def _resampled_weights(log: BidLog, rng: np.random.Generator) -> Floats:
     return rng.multinomial(log.bids, log.weights / log.bids).astype(np.float64)
 
 
+_NORMAL = 1.959964
+"""Two-sided 5 % point of the normal law."""
 _TAIL_BIDS = 3.0
 _ENOUGH_SEEN = 10
 _LEAST_EXCESS = 1e-12
 """Least excess as a share of the threshold, for bids that equal it."""
+_LEAST_SCALE = 1e-6
+"""Least scale of the tail as a share of the threshold, for exceedances that all but equal it."""
 _ROUNDING = 1e-12
