@@ -57,8 +57,8 @@ def evaluate(
     Raises
     ------
     InputError
-        If the mechanism does not serve the supply, a measure or the threshold is unknown, or `method` is "exact"
-        and a measure has no exact integral for this mechanism.
+        If the mechanism does not serve the supply, a measure or the threshold is unknown, or `method` is
+        "exact" and a measure has no exact integral for this mechanism.
     """
     _check(market, mechanism, measures, error, threshold)
     found: dict[str, Estimate] = {}

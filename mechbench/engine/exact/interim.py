@@ -15,6 +15,7 @@ checked in tests/ against simulation and, for one unit and uniform values, again
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -34,14 +35,15 @@ _DEEP = np.interp(
     np.arange(0.0, 32.25, 0.25), np.arange(0.0, 36.0, 4.0), [0.0, 2.0, 4.0, 7.0, 11.0, 16.0, 22.0, 29.0, 36.0]
 )
 """Panel edges below the bump of the law, where the win is certain: the weight falls like ``exp(-distance)``."""
+_HALVINGS = 40
 _GOLDEN = 0.5 * (np.sqrt(5.0) - 1.0)
 
 
 def interim_gain(sizes: Sizes, price: InterimPrice, error: float) -> tuple[Floats, Floats]:
     """Interim gain and a bound on its error, arrays (cells,).
 
-    The integral is taken on panels that are halved until two passes agree; the maximum over reports may move
-    from one place to another as the value rises, so nothing faster than the difference of the passes is claimed.
+    The integral over values runs on panels that are halved where they have not settled, because the best report
+    may jump from one place to another as the value rises; all is done on two grids of reports.
     """
     pairs = [_one_size(_only(sizes, cell), price, error) for cell in range(sizes.units.size)]
     value, bounds = np.array(pairs).T
@@ -49,27 +51,23 @@ def interim_gain(sizes: Sizes, price: InterimPrice, error: float) -> tuple[Float
 
 
 def _only(sizes: Sizes, cell: int) -> Sizes:
-    return Sizes(
-        sizes.values,
-        sizes.turnout,
-        sizes.reserve,
-        sizes.bidders[cell : cell + 1],
-        sizes.units[cell : cell + 1],
-    )
+    one = slice(cell, cell + 1)
+    return Sizes(sizes.values, sizes.turnout, sizes.reserve, sizes.bidders[one], sizes.units[one])
 
 
 def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, float]:
     unsold, unsold_error = units_unsold(sizes, Resolution())
     winners = float((sizes.units * (1.0 - unsold))[0] / sizes.bidders[0])
     slack = float(unsold_error[0] * sizes.units[0] / sizes.bidders[0]) / winners
-    coarse = _gained(sizes, price, 12) / winners
+    goal = 0.1 * error * winners
+    coarse, _ = _gained(_grid(sizes, price, 12), sizes, price, goal)
     for panels in (24, 48, 96):
-        fine = _gained(sizes, price, panels) / winners
-        spread = abs(fine - coarse) + (1e-13 + slack) * fine
-        if spread <= error:
+        fine, unsettled = _gained(_grid(sizes, price, panels), sizes, price, goal)
+        bound = (abs(fine - coarse) + unsettled + (1e-13 + slack) * fine) / winners
+        if bound <= error:
             break
         coarse = fine
-    return fine, spread
+    return fine / winners, bound
 
 
 @dataclass(frozen=True)
@@ -80,12 +78,10 @@ class _Reports:
     ----------
     edges : array (panels + 1,)
     y, s, place : the nodes, flat
-    step : array (nodes,)
-        Weight of each node for an integral over s.
     wins : array (nodes,)
         G.
-    saved : array (nodes,)
-        Integral of W from the lowest report to the node's, in currency.
+    slope : array (nodes,)
+        W times the report's slope over the log-odds.
     """
 
     law: OrderLaw
@@ -93,40 +89,106 @@ class _Reports:
     y: Floats
     s: Floats
     place: Place
-    step: Floats
     wins: Floats
-    saved: Floats
     slope: Floats
 
+    @cached_property
+    def antiderivative(self) -> Floats:
+        """Legendre coefficients of the integral of W from each panel's left end, array (panels, order + 1)."""
+        table = self.slope.reshape(-1, _ORDER)
+        basis = np.polynomial.legendre.legvander(_NODES, _ORDER - 1)
+        coefficients = ((table * _WEIGHTS) @ basis) * (np.arange(_ORDER) + 0.5)
+        return np.polynomial.legendre.legint(coefficients, lbnd=-1, axis=1)
 
-def _gained(sizes: Sizes, price: InterimPrice, panels: int) -> float:
-    """Integral over a bidder's tail probability of its best interim gain over its value."""
-    grid = _grid(sizes, price, panels)
-    bid = grid.place.bid
-    best, at = np.zeros_like(grid.y), np.zeros(grid.y.size, dtype=np.intp)
-    for start in range(0, grid.y.size, 256):
-        rows = np.arange(start, min(start + 256, grid.y.size))
-        gain = _gain(
-            grid, sizes, rows[:, None], grid.y[None, :], grid.wins[None, :], grid.saved[None, :], bid
-        )
-        gain[grid.y[None, :] < grid.y[rows][:, None]] = -np.inf
-        at[rows] = gain.argmax(axis=1)
-        best[rows] = np.maximum(gain.max(axis=1), 0.0)
-    best = np.maximum(best, _refined(grid, sizes, price, at, bid))
-    best = np.maximum(best, _at_floor(grid, sizes, price, bid))
-    return float((grid.step * best).sum())
+    @cached_property
+    def from_panel(self) -> Floats:
+        """Integral of W from the lowest report up to each panel's left end, array (panels,)."""
+        whole = 0.5 * np.diff(self.edges) * (self.slope.reshape(-1, _ORDER) @ _WEIGHTS)
+        return np.cumsum(whole[::-1])[::-1]
+
+    @cached_property
+    def saved(self) -> Floats:
+        """Integral of W from the lowest report to each node's, in currency."""
+        return _saved_at(self, self.y)
 
 
-def _gain(
-    grid: _Reports, sizes: Sizes, value: NDArray[np.intp], y: Floats, wins: Floats, saved: Floats, bid: Floats
-) -> Floats:
-    """Gain over value of reporting the bid at log-odds `y` when the value is that of node `value`."""
-    s, rest, _ = grid.law.at(np.atleast_2d(y))
-    report = sizes.place(s, rest)
-    ratio = np.maximum(np.log(s / grid.s[value]), 0.0)
-    shaded = report.drop_from(ratio) * wins
-    worth = np.where(bid[value] > 0, bid[value], 1.0)
-    return shaded - (grid.saved[value] - saved) / worth
+def _gained(grid: _Reports, sizes: Sizes, price: InterimPrice, goal: float) -> tuple[float, float]:
+    """Integral over a bidder's tail probability of its best interim gain over its value, and its own error."""
+    left, right = grid.edges[:-1], grid.edges[1:]
+    whole = _panels(grid, sizes, price, left, right)
+    done, error = 0.0, 0.0
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (left + right)
+        lower, upper = _panels(grid, sizes, price, left, middle), _panels(grid, sizes, price, middle, right)
+        gap = np.abs(lower + upper - whole)
+        settled = gap <= goal / grid.edges.size
+        done += float((lower + upper)[settled].sum())
+        error += float(gap[settled].sum())
+        if settled.all():
+            return done, error
+        open_ = ~settled
+        left = np.concatenate([left[open_], middle[open_]])
+        right = np.concatenate([middle[open_], right[open_]])
+        whole = np.concatenate([lower[open_], upper[open_]])
+    return done + float(whole.sum()), error + float(gap[open_].sum())
+
+
+def _panels(grid: _Reports, sizes: Sizes, price: InterimPrice, left: Floats, right: Floats) -> Floats:
+    """Integral of the best gain over each panel of values, array (panels,)."""
+    half = 0.5 * (right - left)
+    values = _Values.at(grid, sizes, price, (left[:, None] + half[:, None] * (1.0 + _NODES)).ravel())
+    best = np.empty_like(values.y)
+    for start in range(0, values.y.size, 512):
+        rows = values.rows(slice(start, start + 512))
+        best[start : start + 512] = _best_gain(grid, sizes, price, rows)
+    return half * ((best * values.density).reshape(-1, _ORDER) @ _WEIGHTS)
+
+
+@dataclass(frozen=True)
+class _Values:
+    """A bidder's values: log-odds, tail probability, its density over log-odds, the bid, and `saved`."""
+
+    y: Floats
+    s: Floats
+    density: Floats
+    place: Place
+    saved: Floats
+
+    @classmethod
+    def at(cls, grid: _Reports, sizes: Sizes, price: InterimPrice, y: Floats) -> _Values:
+        s, rest, place = _place(sizes, grid.law, y)
+        saved = _saved_at(grid, y) if price.own != 1.0 else np.zeros_like(y)
+        return cls(y, s, s * rest, place, saved)
+
+    def rows(self, some: slice) -> _Values:
+        place = Place(self.place.values, self.place.at[some], self.place.rest[some])
+        return _Values(self.y[some], self.s[some], self.density[some], place, self.saved[some])
+
+    @cached_property
+    def worth(self) -> Floats:
+        bid = self.place.bid
+        return np.where(bid > 0, bid, 1.0)
+
+
+def _place(sizes: Sizes, law: OrderLaw, y: Floats) -> tuple[Floats, Floats, Place]:
+    s, rest, _ = law.at(y[None, :])
+    to_floor = None
+    if sizes.chance_not > 0:
+        cut = law.log_odds(sizes.chance, sizes.chance_not)[0]
+        to_floor = (sizes.chance * rest * -np.expm1(np.minimum(y[None, :] - cut, 0.0)))[0]
+    return s[0], rest[0], sizes.place(s[0], rest[0], to_floor)
+
+
+def _best_gain(grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Values) -> Floats:
+    """Best interim gain over value: the best node of the grid, refined between its neighbours, or the floor."""
+    # plain differences are enough to find the node; the gain itself comes from ratios
+    gain = (values.worth[:, None] - grid.place.bid) * grid.wins
+    if price.own != 1.0:
+        gain -= values.saved[:, None] - grid.saved
+    gain[grid.y < values.y[:, None]] = -np.inf
+    at = gain.argmax(axis=1)
+    best = np.maximum(_between_neighbours(grid, sizes, price, values, at), 0.0)
+    return np.maximum(best, _at_floor(grid, sizes, price, values))
 
 
 def _grid(sizes: Sizes, price: InterimPrice, panels: int) -> _Reports:
@@ -146,21 +208,14 @@ def _grid(sizes: Sizes, price: InterimPrice, panels: int) -> _Reports:
     edge = np.unique(np.concatenate([*edges, *[k for k in knots if edges[0][0] < k[0] < last]]))
     half = 0.5 * np.diff(edge)
     y = (edge[:-1, None] + half[:, None] * (1.0 + _NODES)).ravel()
-    s, rest, _ = law.at(y[None, :])
-    to_floor = None
-    if sizes.chance_not > 0:
-        to_floor = sizes.chance * rest * -np.expm1(np.minimum(y[None, :] - cut, 0.0))
-    place = sizes.place(s, rest, to_floor)
-    place = Place(place.values, place.at[0], place.rest[0])
-    step = (half[:, None] * _WEIGHTS).ravel() * s[0] * rest[0]
-    wins = binomial_at_most(sizes.units[0] - 1, sizes.bidders[0] - 1, s[0], rest[0])
+    s, rest, place = _place(sizes, law, y)
+    wins = binomial_at_most(sizes.units[0] - 1, sizes.bidders[0] - 1, s, rest)
     slope = np.zeros_like(y)
     if price.own != 1.0:
         with np.errstate(divide="ignore", over="ignore"):
-            steep = s[0] * rest[0] / (sizes.turnout * sizes.values.density(place.bid))
-        slope = np.where(np.isfinite(steep), steep, 0.0) * _weight(sizes, price, s[0], rest[0], wins)
-    saved = _from_below(slope, half)
-    return _Reports(law, edge, y, s[0], place, step, wins, saved, slope)
+            steep = s * rest / (sizes.turnout * sizes.values.density(place.bid))
+        slope = np.where(np.isfinite(steep), steep, 0.0) * _weight(sizes, price, s, rest, wins)
+    return _Reports(law, edge, y, s, place, wins, slope)
 
 
 def _weight(sizes: Sizes, price: InterimPrice, s: Floats, rest: Floats, wins: Floats) -> Floats:
@@ -177,55 +232,32 @@ def _weight(sizes: Sizes, price: InterimPrice, s: Floats, rest: Floats, wins: Fl
     return (1.0 - price.own - price.lowest) * wins + price.lowest * np.maximum(fewer - alone, 0.0)
 
 
-_INTEGRATE = np.array(
-    [
-        np.polynomial.legendre.legval(_NODES, np.polynomial.legendre.legint(np.eye(_ORDER)[degree], lbnd=-1))
-        for degree in range(_ORDER)
-    ]
-).T @ ((np.arange(_ORDER)[:, None] + 0.5) * np.polynomial.legendre.legvander(_NODES, _ORDER - 1).T * _WEIGHTS)
-"""Values at a panel's nodes to the integral from the panel's left end to each node (for half-width 1)."""
-
-
-def _from_below(slope: Floats, half: Floats) -> Floats:
-    """Integral over the log-odds from each node to the right end, i.e. up from the lowest report."""
-    table = slope.reshape(-1, _ORDER)
-    whole = half * (table @ _WEIGHTS)
-    inside = half[:, None] * (table @ _INTEGRATE.T)
-    to_right = whole[:, None] - inside
-    beyond = np.concatenate([np.cumsum(whole[::-1])[::-1][1:], [0.0]])
-    return (to_right + beyond[:, None]).ravel()
-
-
 def _saved_at(grid: _Reports, y: Floats) -> Floats:
-    """`saved` between the nodes: the panel's own polynomial, integrated."""
+    """Return `saved` between the nodes: the panel's own polynomial, integrated."""
     half = 0.5 * np.diff(grid.edges)
     panel = np.clip(np.searchsorted(grid.edges, y, side="right") - 1, 0, half.size - 1)
-    table = grid.slope.reshape(-1, _ORDER)
-    coefficients = (
-        (np.arange(_ORDER) + 0.5) * (table * _WEIGHTS) @ np.polynomial.legendre.legvander(_NODES, _ORDER - 1)
-    )
-    whole = half * (table @ _WEIGHTS)
-    beyond = np.concatenate([np.cumsum(whole[::-1])[::-1][1:], [0.0]])
     x = np.clip((y - grid.edges[panel]) / half[panel] - 1.0, -1.0, 1.0)
-    antiderivative = np.polynomial.legendre.legint(coefficients.T, lbnd=-1)
     powers = np.polynomial.legendre.legvander(x, _ORDER)
-    inside = half[panel] * np.einsum("ij,ji->i", powers, antiderivative[:, panel])
-    return whole[panel] - inside + beyond[panel]
+    inside = half[panel] * np.einsum("ij,ij->i", powers, grid.antiderivative[panel])
+    return grid.from_panel[panel] - inside
 
 
-def _refined(grid: _Reports, sizes: Sizes, price: InterimPrice, at: NDArray[np.intp], bid: Floats) -> Floats:
-    """Best gain between the neighbours of the best node, by golden section."""
-    node = np.arange(grid.y.size)
-    low = np.maximum(grid.y[np.maximum(at - 1, 0)], grid.y)
-    high = grid.y[np.minimum(at + 1, grid.y.size - 1)]
-    high = np.where(at + 1 >= grid.y.size, grid.edges[-1], high)
+def _between_neighbours(
+    grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Values, at: NDArray[np.intp]
+) -> Floats:
+    """Best gain over value between the neighbours of the best node, by golden section."""
+    last = grid.y.size - 1
+    low = np.maximum(np.where(at > 0, grid.y[np.maximum(at - 1, 0)], grid.edges[0]), values.y)
+    high = np.where(at < last, grid.y[np.minimum(at + 1, last)], grid.edges[-1])
     high = np.maximum(high, low)
 
     def gain(y: Floats) -> Floats:
-        s, rest, _ = grid.law.at(y[None, :])
-        wins = binomial_at_most(sizes.units[0] - 1, sizes.bidders[0] - 1, s[0], rest[0])
-        saved = _saved_at(grid, y) if price.own != 1.0 else np.zeros_like(y)
-        return _gain(grid, sizes, node, y, wins, saved, bid)[0]
+        s, rest, report = _place(sizes, grid.law, y)
+        wins = binomial_at_most(sizes.units[0] - 1, sizes.bidders[0] - 1, s, rest)
+        shaded = report.drop_from(np.maximum(np.log(s / values.s), 0.0)) * wins
+        if price.own == 1.0:
+            return shaded
+        return shaded - (values.saved - _saved_at(grid, y)) / values.worth
 
     left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_left, at_right = gain(left), gain(right)
@@ -241,7 +273,7 @@ def _refined(grid: _Reports, sizes: Sizes, price: InterimPrice, at: NDArray[np.i
     return best
 
 
-def _at_floor(grid: _Reports, sizes: Sizes, price: InterimPrice, bid: Floats) -> Floats:
+def _at_floor(grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Values) -> Floats:
     """Gain over value of reporting the lowest bid that can win."""
     floor, share = sizes.floor
     wins = float(
@@ -249,13 +281,12 @@ def _at_floor(grid: _Reports, sizes: Sizes, price: InterimPrice, bid: Floats) ->
             sizes.units[0] - 1, sizes.bidders[0] - 1, np.array(sizes.chance), np.array(sizes.chance_not)
         )
     )
-    ratio = np.maximum(np.log(floor.at[0] / grid.place.at), 0.0)
+    ratio = np.maximum(np.log(floor.at[0] / values.place.at), 0.0)
     drop = Place(
         sizes.values, np.full_like(ratio, floor.at[0]), np.full_like(ratio, floor.rest[0])
     ).drop_from(ratio)
     room = np.ones_like(ratio) if share == 0 else drop + (1.0 - drop) * (1.0 - share)
-    worth = np.where(bid > 0, bid, 1.0)
     # from the lowest value down to a reserve below it, whoever wins is the lowest winner: W is constant there
     below_all = max(sizes.values.support[0] - sizes.reserve, 0.0)
-    saved = grid.saved + (1.0 - price.own - price.lowest) * wins * below_all
-    return room * wins - saved / worth
+    saved = values.saved + (1.0 - price.own - price.lowest) * wins * below_all
+    return room * wins - saved / values.worth
