@@ -61,7 +61,7 @@ def draw_amounts(
     """
     outcome = mechanism.outcome(bids, supply)
     won: NDArray[np.bool_] = outcome.allocation > 0
-    sold: Floats = won.any(axis=1).astype(np.float64)
+    sold = np.asarray(won.any(axis=1), dtype=np.float64)
     wanted = set(measures)
     of: dict[str, Floats] = {}
     searched: frozenset[str] = frozenset()

@@ -45,7 +45,7 @@ class Draws(Protocol):
 
 
 def doublings(
-    source: Draws, max_draws: int | None, progress: Callable[[int, int], None] | None
+    source: Draws, max_draws: int | None, progress: Callable[[int], None] | None
 ) -> Iterator[tuple[Floats, int]]:
     """Draw, and draw as many again, for as long as the caller asks.
 
@@ -55,7 +55,7 @@ def doublings(
     max_draws : int or None
         Never more draws than this.
     progress : callable or None
-        Called with the draws made and the most there can be.
+        Called with the draws made so far.
 
     Yields
     ------
@@ -68,22 +68,18 @@ def doublings(
     first = min(_BATCHES, max(FEWEST, _FIRST // source.width), most)
     draws = 1 << (first.bit_length() - 1)
     most = draws << ((most // draws).bit_length() - 1)
-    sums = _sums(source, draws, draws, lambda made: _tell(progress, made, most))
+    sums = _sums(source, draws, draws, progress, 0)
     yield sums, draws
     while 2 * draws <= most:
         kept = sums if 2 * draws <= _BATCHES else sums.reshape(-1, 2, source.columns).sum(axis=1)
-        already = draws
-        fresh = _sums(source, draws, len(kept), lambda made, done=already: _tell(progress, done + made, most))  # type: ignore[misc]
+        fresh = _sums(source, draws, len(kept), progress, draws)
         sums, draws = np.concatenate([kept, fresh]), 2 * draws
         yield sums, draws
 
 
-def _tell(progress: Callable[[int, int], None] | None, made: int, most: int) -> None:
-    if progress is not None:
-        progress(made, most)
-
-
-def _sums(source: Draws, draws: int, batches: int, made: Callable[[int], None]) -> Floats:
+def _sums(
+    source: Draws, draws: int, batches: int, progress: Callable[[int], None] | None, already: int
+) -> Floats:
     """Make new draws and sum them over equal batches; both counts are powers of two."""
     size = draws // batches
     height = min(draws, _ROWS)
@@ -93,7 +89,8 @@ def _sums(source: Draws, draws: int, batches: int, made: Callable[[int], None]) 
     for start in range(0, draws, height):
         for at in range(0, height, block):
             source.fill(rows[at : at + block])
-            made(start + min(at + block, height))
+            if progress is not None:
+                progress(already + start + min(at + block, height))
         if size <= height:
             sums[start // size : (start + height) // size] = rows.reshape(-1, size, source.columns).sum(
                 axis=1

@@ -37,9 +37,9 @@ _LEVELS = 1.0 / (1.0 + np.exp(-np.linspace(-8.0, 8.0, 49)))
 """Chances of winning at which reports are laid out, even in log-odds."""
 _FLOOR = 0.2
 """Share of the values drawn evenly, whatever their chance to win."""
-_PILOT_SHARE = 0.4
-_PILOT_DRAWS = (2**12, 2**17)
-_PILOT_BIDS = 2**26
+_PILOT_SHARE = 1.6
+_PILOT_DRAWS = (2**12, 2**20)
+_PILOT_BIDS = 2**27
 """Bound on the bids that the pilot evaluates for one mechanism."""
 _SAME = 1e-9
 
@@ -90,6 +90,11 @@ class InterimDraws:
         self._answers = self._learn(generators(market, seed, 5, count), error)
 
     @property
+    def notes(self) -> dict[tuple[int, str], str]:
+        """Nothing is the matter with shares."""
+        return {}
+
+    @property
     def columns(self) -> int:
         """How many sums a draw adds to."""
         return 3 * len(self._mechanisms)
@@ -114,14 +119,14 @@ class InterimDraws:
             columns = rows[:, 3 * index : 3 * index + 3]
             columns[:, 0] = 0.0
             if not answer.truthful.all():
-                best = self._best_report(answer, value, cell)
+                best = self.best_report(index, value, cell)
                 better_won, better_paid = self._report(index, best, others)
                 gain = value * (better_won - won) - (better_paid - paid)
                 np.divide(weight * gain, value, out=columns[:, 0], where=value > 0)
             columns[:, 2] = won > 0
             columns[:, 1] = weight * columns[:, 2]
 
-    def ratios(self, sums: Floats) -> dict[tuple[int, str], Ratio]:
+    def ratios(self, sums: Floats, draws: int) -> dict[tuple[int, str], Ratio]:  # noqa: ARG002  as of the crowd
         """Interim gain of every mechanism, from the sums over batches of all draws."""
         by_mechanism = np.split(sums, len(self._mechanisms), axis=1)
         return {
@@ -129,9 +134,29 @@ class InterimDraws:
             for i, own in enumerate(by_mechanism)
         }
 
-    def _best_report(self, answer: _Answer, value: Floats, cell: NDArray[np.intp]) -> Floats:
+    def best_report(self, index: int, value: Floats, cell: NDArray[np.intp]) -> Floats:
+        """Report that the pilot found best for a mechanism at each value, array (draws,).
+
+        `cell` says in which cell of the layout each value lies. Between the reports tried, the top of the
+        parabola through the best and its neighbours is taken, except at the reserve, where chances jump.
+        """
+        answer, reports = self._answers[index], self._layout.reports
         utility = value[:, None] * answer.chance - answer.paid
-        best: Floats = self._layout.reports[utility.argmax(axis=1)]
+        place = np.clip(utility.argmax(axis=1), 1, len(reports) - 2)
+        row = np.arange(len(value))
+        here = utility[row, place]
+        fall_left, fall_right = here - utility[row, place - 1], here - utility[row, place + 1]
+        left, right = reports[place] - reports[place - 1], reports[place + 1] - reports[place]
+        bend = fall_left * right + fall_right * left
+        peak = (
+            (fall_left >= 0)
+            & (fall_right >= 0)
+            & (bend > 0)
+            & (reports[place] != self._market.supply.reserve)
+        )
+        shift = np.zeros_like(value)
+        np.divide(fall_left * right**2 - fall_right * left**2, 2.0 * bend, out=shift, where=peak)
+        best = np.where(peak, reports[place] + shift, reports[utility.argmax(axis=1)])
         return np.where(answer.truthful[cell], value, best)
 
     def _rival_bids(self, sources: Sequence[np.random.Generator], draws: int) -> Floats:

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from mechbench.contract import MEASURES, MONEY, InputError, Mechanism
 from mechbench.engine.batches import FEWEST, doublings
@@ -25,6 +25,9 @@ __all__ = ["Simulation", "simulate"]
 NO_SALE = "nothing was sold in any draw"
 NOT_REACHED = "error not reached"
 
+_FORESIGHT = 2**0.5 / 1.1
+"""How much too large a half-width may be for twice the draws to do, with some room for chance."""
+
 
 @dataclass(frozen=True)
 class Simulation:
@@ -37,20 +40,19 @@ class Simulation:
     error : float
         The half-width asked for.
     seed : int
-    draws : int
-        How many draws the measures of a draw rest on.
-    interim_draws : int
-        How many the interim gains rest on.
+    draws : mapping of int by str
+        How many draws each measure rests on.
+    ratios, notes : mapping by (int, str)
+        The sums behind each measure of each mechanism, and what is the matter with it where something is.
     """
 
     mechanisms: tuple[Mechanism, ...]
     measures: tuple[str, ...]
     error: float
     seed: int
-    draws: int
-    interim_draws: int
-    _ratios: Mapping[tuple[int, str], Ratio] = field(repr=False)
-    _notes: Mapping[tuple[int, str], str] = field(repr=False)
+    draws: Mapping[str, int] = field(default_factory=dict)
+    ratios: Mapping[tuple[int, str], Ratio] = field(default_factory=dict, repr=False)
+    notes: Mapping[tuple[int, str], str] = field(default_factory=dict, repr=False)
 
     def estimate(self, i: int, measure: str) -> Estimate:
         """Estimate one measure of the i-th mechanism.
@@ -60,7 +62,7 @@ class Simulation:
         InputError
             If the measure was not asked for.
         """
-        ratio, note = self._ratio(i, measure), self._notes.get((i, measure), "")
+        ratio, note = self._ratio(i, measure), self.notes.get((i, measure), "")
         if note == INFINITE:
             return self._without_number(math.nan if measure == "efficiency" else math.inf, note)
         if not ratio.known:
@@ -77,7 +79,7 @@ class Simulation:
             If the measure was not asked for.
         """
         first, second = self._ratio(i, measure), self._ratio(j, measure)
-        notes = sorted({self._notes.get((i, measure), ""), self._notes.get((j, measure), "")} - {""})
+        notes = sorted({self.notes.get((i, measure), ""), self.notes.get((j, measure), "")} - {""})
         if INFINITE in notes:
             return self._without_number(math.nan, INFINITE)
         if not (first.known and second.known):
@@ -86,19 +88,22 @@ class Simulation:
         half_width = difference_half_width(first, second)
         return self._estimate(first.value - second.value, half_width, accepted, "; ".join(notes))
 
-    def unmet(self, measures: Sequence[str]) -> bool:
-        """Whether a half-width of these measures is still above the error asked for."""
-        return any(
-            NOT_REACHED in self.estimate(i, measure).status
-            for i in range(len(self.mechanisms))
-            for measure in measures
-        )
+    def met(self, measures: Sequence[str], slack: float) -> bool:
+        """Whether every half-width of these measures is within `slack` times the error asked for."""
+        for i in range(len(self.mechanisms)):
+            for measure in measures:
+                estimate = self.estimate(i, measure)
+                if estimate.status == NO_SALE or estimate.error > slack * self._accepted(
+                    measure, estimate.value
+                ):
+                    return False
+        return True
 
     def _ratio(self, i: int, measure: str) -> Ratio:
         if measure not in self.measures:
             msg = f"measure {measure!r} was not simulated; accepted: {', '.join(self.measures)}"
             raise InputError(msg)
-        return self._ratios[i, measure]
+        return self.ratios[i, measure]
 
     def _accepted(self, measure: str, value: float) -> float:
         return self.error * abs(value) if measure in MONEY else self.error
@@ -121,7 +126,7 @@ def simulate(
     seed: int,
     threshold: float = 0.05,
     max_draws: int | None = None,
-    progress: Callable[[int, int], None] | None = None,
+    progress: Callable[[int], None] | None = None,
 ) -> Simulation:
     """Simulate a market until every measure of every mechanism is known to the error asked for.
 
@@ -142,7 +147,7 @@ def simulate(
         At most so many draws, at least 64; 2^24 unless given, fewer where each holds many bids. Draws come in
         doublings, so as few as half of that may be made. An error not reached then is said in the status.
     progress : callable, optional
-        Called with the draws made so far and the most there can be.
+        Called with the number of draws made so far; interim gains start again from 0.
 
     Returns
     -------
@@ -156,27 +161,40 @@ def simulate(
     _check(market, mechanisms, measures, error, seed, threshold, max_draws)
     mechanisms, measures = tuple(mechanisms), tuple(dict.fromkeys(measures))
     of_draws = [measure for measure in measures if measure != "interim_gain"]
-    ratios: dict[tuple[int, str], Ratio] = {}
-    notes: dict[tuple[int, str], str] = {}
-    counts = {"draws": 0, "interim_draws": 0}
-
-    def so_far() -> Simulation:
-        return Simulation(mechanisms, measures, error, seed, **counts, _ratios=ratios, _notes=notes)
-
+    found = Simulation(mechanisms, measures, error, seed)
     if of_draws:
         crowd = CrowdDraws(market, mechanisms, of_draws, seed, threshold)
-        for sums, counts["draws"] in doublings(crowd, max_draws, progress):
-            ratios |= crowd.ratios(sums, counts["draws"])
-            notes |= crowd.notes
-            if not so_far().unmet(of_draws):
-                break
+        found = _until_known(found, crowd, of_draws, max_draws, progress)
     if "interim_gain" in measures:
-        single = InterimDraws(market, mechanisms, seed, error)
-        for sums, counts["interim_draws"] in doublings(single, max_draws, progress):
-            ratios |= single.ratios(sums)
-            if not so_far().unmet(["interim_gain"]):
-                break
-    return so_far()
+        interim = InterimDraws(market, mechanisms, seed, error)
+        found = _until_known(found, interim, ["interim_gain"], max_draws, progress)
+    return found
+
+
+def _until_known(
+    found: Simulation,
+    source: CrowdDraws | InterimDraws,
+    wanted: Sequence[str],
+    max_draws: int | None,
+    progress: Callable[[int], None] | None,
+) -> Simulation:
+    """Draw until the errors of the wanted measures are met.
+
+    Stopping as soon as they are would favour draws that happen to scatter little. The decision is therefore
+    taken one doubling ahead, on draws that are then only half of those the estimates rest on.
+    """
+    foreseen = False
+    for sums, draws in doublings(source, max_draws, progress):
+        found = replace(
+            found,
+            draws={**found.draws, **dict.fromkeys(wanted, draws)},
+            ratios={**found.ratios, **source.ratios(sums, draws)},
+            notes={**found.notes, **source.notes},
+        )
+        if foreseen and found.met(wanted, 1.0):
+            break
+        foreseen = found.met(wanted, _FORESIGHT)
+    return found
 
 
 def _check(  # noqa: PLR0917  the arguments of `simulate`

@@ -2,8 +2,9 @@
 
 With tail index xi the r-th moment of the j-th highest of any number of bids is finite exactly when
 ``r xi < j``. An amount that keeps growing with the j highest bids together, but not with fewer, therefore has
-no mean from ``xi = j`` on and no variance from ``xi = j / 2`` on. How many that takes is found by trial:
-raise the j highest bids by a large factor and see whether the amount takes a part of the rise.
+no mean from ``xi = j`` on, no variance from ``xi = j / 2`` on, and no fourth moment, on which an interval
+needs to rest, from ``xi = j / 4`` on. How many that takes is found by trial: raise the j highest bids by a
+large factor and see whether the amount takes a part of the rise.
 """
 
 from __future__ import annotations
@@ -14,10 +15,11 @@ from mechbench.contract import MONEY, Floats, Mechanism
 from mechbench.engine.amounts import draw_amounts
 from mechbench.market.market import Market
 
-__all__ = ["INFINITE", "INFINITE_VARIANCE", "heavy_amounts"]
+__all__ = ["HEAVY", "INFINITE", "INFINITE_VARIANCE", "heavy_amounts"]
 
 INFINITE = "infinite"
 INFINITE_VARIANCE = "infinite variance: the interval is not to be trusted"
+HEAVY = "heavy tail: the interval may cover less than 95 %"
 
 _RISE = 1e6
 _PART = 1e-3
@@ -27,7 +29,7 @@ _PART = 1e-3
 def heavy_amounts(
     market: Market, mechanism: Mechanism, measures: Collection[str], bids: Floats
 ) -> Mapping[str, str]:
-    """Find the money measures whose mean or variance is infinite.
+    """Find the money measures of which a moment is infinite.
 
     Parameters
     ----------
@@ -40,14 +42,14 @@ def heavy_amounts(
     Returns
     -------
     mapping of str to str
-        `INFINITE` or `INFINITE_VARIANCE` by measure; measures with neither are left out.
+        `INFINITE`, `INFINITE_VARIANCE` or `HEAVY` by measure; others are left out.
     """
     tail_index = market.values.tail_index
-    most = min(int(2.0 * tail_index), bids.shape[1])
+    most = min(int(4.0 * tail_index), bids.shape[1])
     money = set(measures) & MONEY
     found: dict[str, str] = {}
     if "efficiency" in measures and most >= 1:
-        found["efficiency"] = INFINITE if tail_index >= 1 else INFINITE_VARIANCE
+        found["efficiency"] = _note(tail_index)
     if not money or most < 1:
         return found
     before = draw_amounts(mechanism, bids, market.supply, money, 0.0).of
@@ -58,5 +60,11 @@ def heavy_amounts(
         after = draw_amounts(mechanism, raised, market.supply, money, 0.0).of
         for measure in money - set(found):
             if (after[measure] - before[measure] > _PART * rise).any():
-                found[measure] = INFINITE if tail_index >= highest else INFINITE_VARIANCE
+                found[measure] = _note(tail_index / highest)
     return found
+
+
+def _note(weight: float) -> str:
+    if weight >= 1:
+        return INFINITE
+    return INFINITE_VARIANCE if 2.0 * weight >= 1 else HEAVY
