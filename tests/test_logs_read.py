@@ -119,6 +119,7 @@ FAULTS: dict[str, tuple[str | bytes, list[str]]] = {
     "decimal comma quoted": (GOOD + '9,"12,5"\n', [NUMBER, "'12,5'", "decimal comma"]),
     "decimal comma": (GOOD + "9,12,5\n", ["row 42", "3 fields under 2", "decimal commas"]),
     "decimal commas throughout": ("offer\n" + "12,5\n13,5\n" * 20, ["row 2", "2 fields under 1"]),
+    "decimal commas after a blank line": ("offer\n \n" + "12,5\n13,5\n" * 20, ["row 3", "2 fields under 1"]),
     "underscore": (GOOD + "9,1_000\n", [NUMBER, "'1_000'"]),
     "other digits": (GOOD + "9,٤٢\n", [NUMBER, r"'\u0664\u0662'"]),
     "hexadecimal": (GOOD + "9,0x1F\n", [NUMBER, "'0x1F'"]),
@@ -167,6 +168,27 @@ def test_the_auction_column_must_be_there(tmp_path: Path) -> None:
     """A missing auction column is refused like a missing bid column."""
     with pytest.raises(InputError, match=r"no column 'nigth' .the nearest is 'night'"):
         read_log(written(tmp_path, GOOD), bid="offer", auction="nigth")
+
+
+def test_a_bid_without_an_auction_is_refused(tmp_path: Path) -> None:
+    """Bids of no named auction must not be lumped together as one; without the column they are fine."""
+    path = written(tmp_path, GOOD + ",70.5\n")
+    with pytest.raises(InputError, match="row 42, column 'night': found no auction"):
+        read_log(path, bid="offer", auction="night")
+    assert read_log(path, bid="offer").bids == 41
+
+
+def test_a_wide_log_is_read_in_smaller_blocks(tmp_path: Path) -> None:
+    """Forty columns of text beside the bids take no more memory than one."""
+    row = ",".join(["some words that are not a bid"] * 40)
+    header = ",".join(f"word {column}" for column in range(40))
+    path = written(tmp_path, f"offer,{header}\n" + "".join(f"{1 + bid / 7},{row}\n" for bid in range(20_000)))
+    tracemalloc.start()
+    log = read_log(path, bid="offer")
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    assert log.bids == 20_000
+    assert peak < 50e6
 
 
 def test_progress_counts_every_row(tmp_path: Path) -> None:

@@ -57,14 +57,14 @@ def check_header(path: Path, header: Sequence[str], columns: Sequence[str]) -> N
             refuse(path, "row 1", f"no column {quoted(column)}{hint}", accepted)
 
 
-def refuse_first_fault(path: Path, column: str, reason: str) -> NoReturn:
+def refuse_first_fault(path: Path, column: str, auction: str | None, reason: str) -> NoReturn:
     """Find the first fault below the header and refuse the log for it.
 
     Parameters
     ----------
     path : Path
-    column : str
-        The column of the bids, known to be in the header.
+    column, auction : str
+        The columns of the bids and, if there is one, of the auctions, known to be in the header.
     reason : str
         What the fast reader said, for a fault that this slow one does not see.
     """
@@ -73,11 +73,11 @@ def refuse_first_fault(path: Path, column: str, reason: str) -> NoReturn:
         with path.open(encoding="utf-8-sig", newline="") as lines:
             rows = csv.reader(lines, strict=True)
             header = next(rows)
-            place = header.index(column)
+            asked = [header.index(column)] + ([] if auction is None else [header.index(auction)])
             for fields in rows:
                 row = rows.line_num
-                if fields:
-                    _check_row(path, row, fields, header, place)
+                if any(map(str.strip, fields)):
+                    _check_row(path, row, fields, header, asked)
     except UnicodeDecodeError:
         refuse_encoding(path)
     except csv.Error as error:
@@ -98,15 +98,19 @@ def refuse_encoding(path: Path) -> NoReturn:
     refuse(path, f"row {row}", "text that is not UTF-8", "a file saved as UTF-8")
 
 
-def _check_row(path: Path, row: int, fields: list[str], header: list[str], place: int) -> None:
-    """Refuse a row with too many fields, or without a bid."""
+def _check_row(path: Path, row: int, fields: list[str], header: list[str], asked: list[int]) -> None:
+    """Refuse a row with too many fields, without a bid, or without the name of its auction."""
     if len(fields) > len(header):
         found = f"{len(fields)} fields under {len(header)} column names"
         refuse(path, f"row {row}", found, "one field for each column, without decimal commas")
-    text = fields[place] if place < len(fields) else ""
-    where = f"row {row}, column {quoted(header[place])}"
+    text, *names = [fields[place] if place < len(fields) else "" for place in asked]
+    where = f"row {row}, column {quoted(header[asked[0]])}"
     if not text.strip():
         refuse(path, where, "no bid", _ACCEPTED)
+    if "" in names:
+        refuse(
+            path, f"row {row}, column {quoted(header[asked[1]])}", "no auction", "a name for every auction"
+        )
     try:
         bid = float(text) if text.isascii() and "_" not in text else math.nan
     except ValueError:

@@ -65,6 +65,15 @@ def fit_log(log: BidLog) -> Fit:
     """Fit the `empirical` family to a log.
 
     The threshold stands half-way between the two bids that the threshold rule parts.
+
+    Parameters
+    ----------
+    log : BidLog
+        As `mechbench.logs.read.read_log` gives it.
+
+    Returns
+    -------
+    Fit
     """
     return _fit(log, log.weights.astype(np.float64), discovery.family_class("empirical"))
 
@@ -72,7 +81,19 @@ def fit_log(log: BidLog) -> Fit:
 def resampled_fits(log: BidLog, count: int, rng: np.random.Generator) -> Iterator[Fit]:
     """Refit, threshold and tail included, on `count` logs resampled from this one.
 
-    Whole auctions are drawn where the log tells them apart: bids of one night are seldom independent.
+    Whole auctions are drawn where the log tells them apart: bids of one auction are seldom independent. Of a
+    summary every value is drawn as often as a multinomial law of its weights gives.
+
+    Parameters
+    ----------
+    log : BidLog
+    count : int
+        How many resamples; 200 give the intervals whose coverage is tested.
+    rng : Generator
+
+    Yields
+    ------
+    Fit
     """
     family = discovery.family_class("empirical")
     for _ in range(count):
@@ -127,6 +148,17 @@ def depends_on_tail(bids: int, market: Market) -> str | None:
     The best of n bidders typically sits where one value in n is higher. Of so high a value a log of N bids
     shows about N / n; where that is under 10, its sampling error exceeds 30 % and the generalised Pareto
     form, an extrapolation, carries the number.
+
+    Parameters
+    ----------
+    bids : int
+        Bids above 0 in the log.
+    market : Market
+
+    Returns
+    -------
+    str or None
+        A note to put beside the numbers, or ``None`` if the log reaches as far as the market.
     """
     turn_up = market.bidders * market.turnout
     seen = bids / turn_up
@@ -139,6 +171,7 @@ def depends_on_tail(bids: int, market: Market) -> str | None:
 
 
 def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
+    """Fit tail and body to the log's values, each as often as its weight says."""
     reached = np.cumsum(weights)
     total = reached[-1]
     tail_share = _tail_share(log.bids)

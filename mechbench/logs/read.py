@@ -92,9 +92,9 @@ def read_log(
         column, what was found and what is accepted.
     """
     path = Path(path)
-    _check_file(path, [bid] if auction is None else [bid, auction])
+    width = _check_file(path, bid, auction)
     summary, zeros, names = Summary(), 0, []
-    for bids, block_names in _blocks(path, bid, auction):
+    for bids, block_names in _blocks(path, bid, auction, max(_FIELDS // width, 1)):
         above = bids > 0
         zeros += int(bids.size - np.count_nonzero(above))
         summary.add(bids[above])
@@ -110,12 +110,12 @@ def read_log(
     return _long(path, bid, summary, zeros, auction)
 
 
-def _check_file(path: Path, columns: list[str]) -> None:
-    """Refuse what is no file, and a header that will not do."""
+def _check_file(path: Path, bid: str, auction: str | None) -> int:
+    """Refuse what is no file, and a header that will not do; return the number of columns."""
     try:
         with path.open(encoding="utf-8-sig", newline="") as lines:
             header = next(csv.reader(lines), None)
-            first = next(csv.reader(lines), [])
+            first = next((row for row in csv.reader(lines) if any(map(str.strip, row))), [])
     except UnicodeDecodeError:
         faults.refuse_encoding(path)
     except OSError as error:
@@ -124,39 +124,43 @@ def _check_file(path: Path, columns: list[str]) -> None:
         faults.refuse(path, "row 1", f"broken quoting ({error})", "comma-separated text")
     if header is None:
         faults.refuse(path, "", "an empty file", "a CSV file with a row of column names")
-    faults.check_header(path, header, columns)
+    faults.check_header(path, header, [bid] if auction is None else [bid, auction])
     if len(first) > len(header):
-        faults.refuse_first_fault(path, columns[0], "more fields than column names")
+        faults.refuse_first_fault(path, bid, auction, "more fields than column names")
+    return len(header)
 
 
-def _blocks(path: Path, bid: str, auction: str | None) -> Iterator[tuple[Floats, NDArray[np.object_] | None]]:
-    """Bids, and the names of their auctions, block by block of the file."""
+def _blocks(
+    path: Path, bid: str, auction: str | None, rows: int
+) -> Iterator[tuple[Floats, NDArray[np.object_] | None]]:
+    """Bids, and the names of their auctions, in blocks of so many rows."""
     import pandas as pd  # noqa: PLC0415 - half a second that only logs should cost
 
     kinds: defaultdict[str, str] = defaultdict(lambda: "object", {bid: "float64"})
     try:
         with pd.read_csv(
-            path, dtype=kinds, na_filter=False, index_col=False, encoding="utf-8-sig", chunksize=_BLOCK
+            path, dtype=kinds, na_filter=False, index_col=False, encoding="utf-8-sig", chunksize=rows
         ) as blocks:
             for block in blocks:
-                yield _checked(block, path, bid), None if auction is None else block[auction].to_numpy()
+                yield _checked(block, path, bid, auction)
     except UnicodeDecodeError:
         faults.refuse_encoding(path)
-    except (pd.errors.ParserError, pd.errors.ParserWarning, pd.errors.EmptyDataError) as error:
-        faults.refuse_first_fault(path, bid, str(error))
     except InputError:
         raise
-    except ValueError as error:
-        faults.refuse_first_fault(path, bid, str(error))
+    except (pd.errors.ParserWarning, ValueError) as error:  # a parser's error is a ValueError
+        faults.refuse_first_fault(path, bid, auction, str(error))
 
 
-def _checked(block: pd.DataFrame, path: Path, bid: str) -> Floats:
-    """Return the block's bids, or refuse the file."""
+def _checked(
+    block: pd.DataFrame, path: Path, bid: str, auction: str | None
+) -> tuple[Floats, NDArray[np.object_] | None]:
+    """Return the block's bids and their auctions, or refuse the file."""
     bids = np.array(block[bid], dtype=np.float64)
     good = (bids == 0) | ((bids >= faults.LOWEST_BID) & (bids <= faults.HIGHEST_BID))
-    if not good.all():
-        faults.refuse_first_fault(path, bid, "a bid that is no amount")
-    return bids
+    names = None if auction is None else block[auction].to_numpy(dtype=np.object_)
+    if not good.all() or (names is not None and (names == "").any()):
+        faults.refuse_first_fault(path, bid, auction, "a bid that is no amount")
+    return bids, names
 
 
 def _whole(path: Path, bid: str, summary: Summary, zeros: int, names: list[NDArray[np.object_]]) -> BidLog:
@@ -258,7 +262,8 @@ def _zero_notes(zeros: int, bids: int) -> tuple[str, ...]:
     return (note,)
 
 
-_BLOCK = 100_000
+_FIELDS = 200_000
+"""Fields of a block of rows, so that a wide log takes no more memory than a narrow one."""
 _TIES = 0.01
 _LEAST_AUCTIONS = 20
 """Fewer auctions than this resampled whole give too ragged a bootstrap."""
