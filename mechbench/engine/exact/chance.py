@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Callable
 
 import numpy as np
+from numpy.typing import NDArray
 
 from mechbench.contract import Floats, Functional
-from mechbench.engine.exact.rules import bound
+from mechbench.engine.exact.rules import settled
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.units import NoRouteError, Resolution, SlackDraws, contested_nodes
 from mechbench.engine.exact.winners import Place, Ranked
@@ -18,9 +19,7 @@ _FURTHEST = 640.0
 """Log ratio that stands for "as high as values go"; tail probabilities stay representable."""
 
 
-def chance_above(
-    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
-) -> tuple[Floats, Floats]:
+def chance_above(sizes: Sizes, functional: Functional, level: float, resolution: Resolution) -> tuple[Floats, Floats]:
     """P(the amount exceeds `level` and something is sold) and a bound on its error, arrays (cells,).
 
     The amount rises with the winner it runs over, so in each draw it exceeds the level when that winner sits
@@ -47,7 +46,7 @@ def _amount(functional: Functional, place: Place, share: float, ratio: Floats) -
     return functional.amount(Ranked(place, share, lowest=ratio))
 
 
-def _bisect(passed: Callable[[Floats], Floats], low: Floats, high: Floats, steps: int = 56) -> Floats:
+def _bisect(passed: Callable[[Floats], NDArray[np.bool_]], low: Floats, high: Floats, steps: int = 56) -> Floats:
     """Point where a rising condition starts to hold, between `low` (not yet) and `high`."""
     for _ in range(steps):
         middle = 0.5 * (low + high)
@@ -59,7 +58,7 @@ def _bisect(passed: Callable[[Floats], Floats], low: Floats, high: Floats, steps
 def _ratio_at(functional: Functional, place: Place, share: float, level: float) -> Floats:
     """Log ratio beyond which the amount exceeds the level; inf where it never does."""
 
-    def passed(log_of_ratio: Floats) -> Floats:
+    def passed(log_of_ratio: Floats) -> NDArray[np.bool_]:
         return _amount(functional, place, share, np.exp(log_of_ratio)) > level
 
     low = np.full(place.at.shape, np.log(1e-18))
@@ -70,9 +69,7 @@ def _ratio_at(functional: Functional, place: Place, share: float, level: float) 
     return np.where(at_once, 0.0, np.where(reaches, ratio, np.inf))
 
 
-def _contested(
-    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
-) -> tuple[Floats, Floats]:
+def _contested(sizes: Sizes, functional: Functional, level: float, resolution: Resolution) -> tuple[Floats, Floats]:
     rank = sizes.units + 1.0
     value, error = np.zeros_like(rank), np.zeros_like(rank)
     for nodes in contested_nodes(sizes, rank, 0.0, resolution, _first_reach(sizes, functional, level)):
@@ -83,8 +80,8 @@ def _contested(
                 chance = -np.expm1(units * np.log1p(-np.exp(-ratio)))
         else:
             chance = np.exp(-units * ratio)
-        sums = (chance[:, None, :] @ nodes.weights)[:, 0, :]
-        value, error = value + sums[:, 0], error + bound(*sums.T, np.abs(sums[:, 0]))
+        more, more_error = settled(chance, nodes.weights)
+        value, error = value + more, error + more_error
     return value, error
 
 
@@ -93,7 +90,7 @@ def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats |
     law = sizes.law(sizes.units + 1.0)
     low, high = law.reach(0.0)
 
-    def passed(y: Floats) -> Floats:
+    def passed(y: Floats) -> NDArray[np.bool_]:
         s, rest, _ = law.at(y[:, None])
         place = sizes.place(s, rest)
         return _amount(functional, place, 1.0, np.full(s.shape, _FURTHEST))[:, 0] > level
@@ -103,9 +100,7 @@ def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats |
     return _bisect(passed, low, high)
 
 
-def _slack(
-    sizes: Sizes, functional: Functional, level: float, resolution: Resolution
-) -> tuple[Floats, Floats]:
+def _slack(sizes: Sizes, functional: Functional, level: float, resolution: Resolution) -> tuple[Floats, Floats]:
     floor, share = sizes.floor
     place = Place(sizes.values, floor.at[:, None], floor.rest[:, None])
     draws = SlackDraws(sizes, place, share, resolution)

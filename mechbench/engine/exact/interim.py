@@ -45,14 +45,8 @@ def interim_gain(sizes: Sizes, price: InterimPrice, error: float) -> tuple[Float
     The integral over values runs on panels that are halved where they have not settled, because the best report
     may jump from one place to another as the value rises; all is done on two grids of reports.
     """
-    pairs = [_one_size(_only(sizes, cell), price, error) for cell in range(sizes.units.size)]
-    value, bounds = np.array(pairs).T
-    return value, bounds
-
-
-def _only(sizes: Sizes, cell: int) -> Sizes:
-    one = slice(cell, cell + 1)
-    return Sizes(sizes.values, sizes.turnout, sizes.reserve, sizes.bidders[one], sizes.units[one])
+    pairs = [_one_size(sizes.some(slice(cell, cell + 1)), price, error) for cell in range(sizes.units.size)]
+    return np.array([value for value, _ in pairs]), np.array([bound for _, bound in pairs])
 
 
 def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, float]:
@@ -104,7 +98,8 @@ class _Reports:
     def from_panel(self) -> Floats:
         """Integral of W from the lowest report up to each panel's left end, array (panels,)."""
         whole = 0.5 * np.diff(self.edges) * (self.slope.reshape(-1, _ORDER) @ _WEIGHTS)
-        return np.cumsum(whole[::-1])[::-1]
+        summed: Floats = np.cumsum(whole[::-1])[::-1]
+        return summed
 
     @cached_property
     def saved(self) -> Floats:
@@ -188,7 +183,7 @@ def _best_gain(grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Value
     gain[grid.y < values.y[:, None]] = -np.inf
     at = gain.argmax(axis=1)
     best = np.maximum(_between_neighbours(grid, sizes, price, values, at), 0.0)
-    return np.maximum(best, _at_floor(grid, sizes, price, values))
+    return np.maximum(best, _at_floor(sizes, price, values))
 
 
 def _grid(sizes: Sizes, price: InterimPrice, panels: int) -> _Reports:
@@ -226,9 +221,7 @@ def _weight(sizes: Sizes, price: InterimPrice, s: Floats, rest: Floats, wins: Fl
     if sizes.chance < 1:
         # the rivals between the report and the reserve stay away: kept is the chance of any one doing so
         kept = sizes.chance_not + s
-        alone = np.exp(rivals * np.log(kept)) * binomial_at_most(
-            units - 2, rivals, s / kept, sizes.chance_not / kept
-        )
+        alone = np.exp(rivals * np.log(kept)) * binomial_at_most(units - 2, rivals, s / kept, sizes.chance_not / kept)
     return (1.0 - price.own - price.lowest) * wins + price.lowest * np.maximum(fewer - alone, 0.0)
 
 
@@ -239,7 +232,8 @@ def _saved_at(grid: _Reports, y: Floats) -> Floats:
     x = np.clip((y - grid.edges[panel]) / half[panel] - 1.0, -1.0, 1.0)
     powers = np.polynomial.legendre.legvander(x, _ORDER)
     inside = half[panel] * np.einsum("ij,ij->i", powers, grid.antiderivative[panel])
-    return grid.from_panel[panel] - inside
+    saved: Floats = grid.from_panel[panel] - inside
+    return saved
 
 
 def _between_neighbours(
@@ -273,18 +267,14 @@ def _between_neighbours(
     return best
 
 
-def _at_floor(grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Values) -> Floats:
+def _at_floor(sizes: Sizes, price: InterimPrice, values: _Values) -> Floats:
     """Gain over value of reporting the lowest bid that can win."""
     floor, share = sizes.floor
     wins = float(
-        binomial_at_most(
-            sizes.units[0] - 1, sizes.bidders[0] - 1, np.array(sizes.chance), np.array(sizes.chance_not)
-        )
+        binomial_at_most(sizes.units[0] - 1, sizes.bidders[0] - 1, np.array(sizes.chance), np.array(sizes.chance_not))
     )
     ratio = np.maximum(np.log(floor.at[0] / values.place.at), 0.0)
-    drop = Place(
-        sizes.values, np.full_like(ratio, floor.at[0]), np.full_like(ratio, floor.rest[0])
-    ).drop_from(ratio)
+    drop = Place(sizes.values, np.full_like(ratio, floor.at[0]), np.full_like(ratio, floor.rest[0])).drop_from(ratio)
     room = np.ones_like(ratio) if share == 0 else drop + (1.0 - drop) * (1.0 - share)
     # from the lowest value down to a reserve below it, whoever wins is the lowest winner: W is constant there
     below_all = max(sizes.values.support[0] - sizes.reserve, 0.0)

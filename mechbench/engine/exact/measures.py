@@ -60,13 +60,12 @@ def exact(
     if measure != "interim_gain":
         status = _infinity(sizes, measure, functional)
         if status:
-            value = np.inf if status == _INFINITE else np.nan
-            return [_estimate(value, np.inf, status)] * len(markets)
+            return [_estimate(np.inf if status == _INFINITE else np.nan, np.inf, status)] * len(markets)
     try:
         value, bounds = _solve(sizes, measure, functional, error, threshold)
     except NoRouteError:
         return None
-    allowed: Floats = error * (np.abs(value) if measure in MONEY else np.ones_like(value))
+    allowed = error * np.abs(value) if measure in MONEY else np.full_like(value, error)
     return [
         _estimate(float(v), float(b), "ok" if b <= a else "not converged")
         for v, b, a in zip(value, bounds, allowed, strict=True)
@@ -143,9 +142,7 @@ def _efficiency(sizes: Sizes, welfare: Functional, error: float) -> tuple[Floats
     if sizes.reserve <= sizes.values.support[0]:
         return np.ones_like(sizes.units), np.zeros_like(sizes.units)
     free = Sizes(sizes.values, sizes.turnout, 0.0, sizes.bidders, sizes.units)
-    most, most_error = _refined(
-        free, lambda some, fine: expectation(some, welfare, fine), 0.1 * error, relative=True
-    )
+    most, most_error = _refined(free, lambda some, fine: expectation(some, welfare, fine), 0.1 * error, relative=True)
     lost, lost_error = _refined(sizes, lost_welfare, 0.1 * error, relative=True)
     share = lost / most
     return 1.0 - share, lost_error / most + share * most_error / most + 2e-16
@@ -161,8 +158,7 @@ def _refined(sizes: Sizes, route: _Route, error: float, *, relative: bool) -> tu
         if not todo.any():
             break
         resolution = resolution.finer()
-        some = Sizes(sizes.values, sizes.turnout, sizes.reserve, sizes.bidders[todo], sizes.units[todo])
-        finer, finer_bounds = route(some, resolution)
+        finer, finer_bounds = route(sizes.some(todo), resolution)
         better = finer_bounds < bounds[todo]
         value[todo] = np.where(better, finer, value[todo])
         bounds[todo] = np.where(better, finer_bounds, bounds[todo])

@@ -138,9 +138,7 @@ def _stirling_remainder(z: Floats) -> Floats:
     """``log Gamma(z) - ((z - 1/2) log z - z + log(2 pi) / 2)`` for z >= 1."""
     inverse = 1.0 / np.maximum(z, 16.0)
     square = inverse * inverse
-    series = inverse * (
-        1 / 12 - square * (1 / 360 - square * (1 / 1260 - square * (1 / 1680 - square / 1188)))
-    )
+    series = inverse * (1 / 12 - square * (1 / 360 - square * (1 / 1260 - square * (1 / 1680 - square / 1188))))
     if (z >= 16.0).all():  # noqa: PLR2004
         return series
     low = np.minimum(z, 16.0)

@@ -16,7 +16,7 @@ import numpy as np
 
 from mechbench.contract import Floats
 
-__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "tame"]
+__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "settled", "tame"]
 
 EXPONENT = 34.0
 """Mass below ``exp(-34) = 2e-15`` of the peak is left out."""
@@ -148,26 +148,40 @@ def nested(weights: Floats) -> Floats:
     return stacked
 
 
-def bound(full: Floats, half: Floats, quarter: Floats, size: Floats) -> Floats:
+def bound(sums: Floats, size: Floats) -> Floats:
     """Bound on the error of the finest of three nested sums.
 
     Parameters
     ----------
-    full, half, quarter : arrays
+    sums : array (..., 3)
         Sums with steps h, 2 h and 4 h.
-    size : array
+    size : array (...)
         Integral of the absolute value, or more: rounding is a share of it.
 
     Notes
     -----
-    ``|full - half|`` is about the error of `half`. The error of `full` is smaller by at least the factor by
-    which `half` beat `quarter`, for exponential and for algebraic convergence alike; a factor of 10 is kept in
-    hand. The cube catches a difference that is small by accident: under exponential convergence the error of
-    `full` is about the fourth power of that of `quarter`.
+    The difference of the first two is about the error of the second. The error of the first is smaller by at
+    least the factor by which the second beat the third, for exponential and for algebraic convergence alike; a
+    factor of 10 is kept in hand. The cube catches a difference that is small by accident: under exponential
+    convergence the error of the first is about the fourth power of that of the third.
     """
-    fine = np.abs(full - half)
-    coarse = np.abs(half - quarter)
+    fine = np.abs(sums[..., 0] - sums[..., 1])
+    coarse = np.abs(sums[..., 1] - sums[..., 2])
     scale = np.where(size > 0, size, 1.0)
     ratio = np.minimum(1.0, 10.0 * fine / np.maximum(coarse, 1e-300))
     accident = scale * np.minimum(1.0, coarse / scale) ** 3
-    return np.maximum(fine * ratio, np.minimum(accident, coarse)) + 64.0 * _EPSILON * size
+    worst: Floats = np.maximum(fine * ratio, np.minimum(accident, coarse)) + 64.0 * _EPSILON * size
+    return worst
+
+
+def settled(integrand: Floats, weights: Floats) -> tuple[Floats, Floats]:
+    """Integral of a function of one sign and a bound on its error, arrays (cells,).
+
+    Parameters
+    ----------
+    integrand : array (cells, nodes)
+    weights : array (cells, nodes, 3)
+        From `nested`.
+    """
+    sums = (integrand[:, None, :] @ weights)[:, 0, :]
+    return sums[:, 0], bound(sums, np.abs(sums[:, 0]))

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
+from numpy.typing import NDArray
 
 from mechbench.contract import Distribution, Floats
 from mechbench.engine.exact.order import OrderLaw, at_least_one
@@ -104,3 +105,7 @@ class Sizes:
         else:
             bottom = self.eligible[1] + to_floor / self.turnout
         return Place(self.values, np.minimum(s / self.turnout, 1.0), np.minimum(bottom, 1.0))
+
+    def some(self, cells: slice | NDArray[np.bool_]) -> Sizes:
+        """Take some of the sizes."""
+        return Sizes(self.values, self.turnout, self.reserve, self.bidders[cells], self.units[cells])

@@ -8,7 +8,7 @@ import numpy as np
 
 from mechbench.contract import Floats
 from mechbench.engine.exact.order import OrderLaw, binomial_at_most
-from mechbench.engine.exact.rules import bound, finite, nested
+from mechbench.engine.exact.rules import finite, nested, settled
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.units import Resolution
 
@@ -20,11 +20,12 @@ def no_sale(sizes: Sizes) -> Floats:
     if sizes.chance_not <= 0:
         return np.zeros_like(sizes.bidders)
     small = sizes.chance < 0.5  # noqa: PLR2004
-    return np.exp(sizes.bidders * (np.log1p(-sizes.chance) if small else np.log(sizes.chance_not)))
+    nobody: Floats = np.exp(sizes.bidders * (np.log1p(-sizes.chance) if small else np.log(sizes.chance_not)))
+    return nobody
 
 
 def units_unsold(sizes: Sizes, resolution: Resolution) -> tuple[Floats, Floats]:
-    """Expected share of the units left unsold and a bound on its error, arrays (cells,).
+    """Return the expected share of the units left unsold and a bound on its error, arrays (cells,).
 
     Given that the k-th smallest tail probability s misses the reserve's, so do it and each of the k - 1 before
     it with chance ``1 - chance / s``: every term is positive, so a tiny share keeps its digits.
@@ -42,7 +43,7 @@ def units_unsold(sizes: Sizes, resolution: Resolution) -> tuple[Floats, Floats]:
 
 
 def lost_welfare(sizes: Sizes, resolution: Resolution) -> tuple[Floats, Floats]:
-    """Expected value of the units that the reserve keeps from the highest bidders, arrays (cells,).
+    """Return the expected value of the units kept from the highest bidders, arrays (cells,).
 
     A bidder with tail probability t below the reserve would get a unit with the chance that at most k - 1 of the
     others come before it.
@@ -85,6 +86,7 @@ def _beyond_floor(
         s, rest, density = law.at(np.sinh(t))
         past = (left - cut)[:, None] + 2.0 * np.cosh(begin[:, None] + 0.5 * from_lo) * np.sinh(0.5 * from_lo)
         beyond = s * sizes.chance_not * -np.expm1(-past)
-        sums = (integrand(s, rest, density, beyond)[:, None, :] @ nested(weight * np.cosh(t)))[:, 0, :]
-        value, error = value + sums[:, 0], error + bound(*sums.T, np.abs(sums[:, 0]))
+        amount = integrand(s, rest, density, beyond)
+        more, more_error = settled(amount, nested(weight * np.cosh(t)))
+        value, error = value + more, error + more_error
     return value, error

@@ -24,14 +24,14 @@ import numpy as np
 
 from mechbench.contract import Floats, Functional
 from mechbench.engine.exact.order import binomial_at_most, binomial_between
-from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, tame
+from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, settled, tame
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.winners import Place, Ranked
 
 __all__ = ["Contested", "NoRouteError", "Resolution", "SlackDraws", "contested_nodes", "expectation"]
 
-_BLOCK = 1 << 20
-"""Quadrature nodes evaluated at once: bounds the memory of one cell to some tens of MiB."""
+_BLOCK = 1 << 15
+"""Quadrature nodes evaluated at once: what a core's cache holds, so that many sizes cost no more each than one."""
 
 
 class NoRouteError(ValueError):
@@ -68,6 +68,12 @@ class Contested:
     place: Place
     weights: Floats
     knots_below: tuple[float, ...]
+
+    def block(self, cells: slice, nodes: slice) -> Contested:
+        """Take some of the cells and nodes."""
+        place = self.place
+        part = Place(place.values, place.at[cells, nodes], place.rest[cells, nodes])
+        return Contested(part, self.weights[cells, nodes], self.knots_below)
 
 
 def contested_nodes(
@@ -144,33 +150,32 @@ def _contested(sizes: Sizes, functional: Functional, resolution: Resolution) -> 
     growth = max(sizes.values.tail_index, 0.0) if functional.over == "sum" else 0.0
     value, error = np.zeros_like(units), np.zeros_like(units)
     for nodes in contested_nodes(sizes, rank, growth, resolution):
-        count = nodes.place.at.shape[1]
-        step = max(1, _BLOCK // max(1, units.size * _inner_size(sizes, functional, nodes, resolution)))
-        sums = np.zeros((units.size, 9))
-        for start in range(0, count, step):
-            block = slice(start, start + step)
-            part = Contested(
-                Place(sizes.values, nodes.place.at[:, block], nodes.place.rest[:, block]),
-                nodes.weights[:, block],
-                nodes.knots_below,
+        outer = nodes.place.at.shape[1]
+        inner = _inner_size(functional, nodes, resolution)
+        some_cells = max(1, _BLOCK // (outer * inner))
+        some_nodes = max(1, _BLOCK // inner)
+        for cell in range(0, units.size, some_cells):
+            cells = slice(cell, cell + some_cells)
+            sums = sum(
+                _inner(sizes.some(cells), functional, nodes.block(cells, slice(at, at + some_nodes)), resolution)
+                for at in range(0, outer, some_nodes)
             )
-            sums += _inner(sizes, functional, part, resolution)
-        more, more_error = _settle(sums)
-        value, error = value + more, error + more_error
+            more, more_error = _settle(np.asarray(sums))
+            value[cells] += more
+            error[cells] += more_error
     return value, error
 
 
-def _inner_size(sizes: Sizes, functional: Functional, nodes: Contested, resolution: Resolution) -> int:
+def _inner_size(functional: Functional, nodes: Contested, resolution: Resolution) -> int:
     panels = 1 + len(nodes.knots_below)
     dimensions = max(0, len(functional.uses) - 1)
     if "winner" in functional.uses and len(functional.uses) == 1:
         dimensions = 1
-    del sizes
     return int((resolution.inner if panels == 1 else panels * resolution.cut) ** dimensions)
 
 
 def _inner(sizes: Sizes, functional: Functional, nodes: Contested, resolution: Resolution) -> Floats:
-    """Sums over one block of outer nodes, the columns of `_fold`."""
+    """Sum over one block of outer nodes; returns the columns of `_fold`."""
     over, uses, units = functional.over, functional.uses, sizes.units[:, None, None]
     place = Place(sizes.values, nodes.place.at[..., None], nodes.place.rest[..., None])
     if over == "sum" and uses in ({"threshold"}, {"lowest"}):
@@ -200,9 +205,7 @@ def _no_route(functional: Functional) -> str:
     return f"no exact integral over {functional.over} of what uses {', '.join(sorted(functional.uses))}"
 
 
-def _mean_with_lowest(
-    sizes: Sizes, functional: Functional, nodes: Contested, resolution: Resolution
-) -> Floats:
+def _mean_with_lowest(sizes: Sizes, functional: Functional, nodes: Contested, resolution: Resolution) -> Floats:
     """Mean over the winners of an amount that also looks at the lowest of them: three dimensions."""
     units = sizes.units[:, None, None]
     place = Place(sizes.values, nodes.place.at[..., None], nodes.place.rest[..., None])
@@ -220,9 +223,7 @@ def _mean_with_lowest(
     return sums
 
 
-def _typical(
-    nodes: Contested, units: Floats, resolution: Resolution, growth: float = 0.0
-) -> tuple[Floats, Floats]:
+def _typical(nodes: Contested, units: Floats, resolution: Resolution, growth: float = 0.0) -> tuple[Floats, Floats]:
     """Log ratios from a bid up to the lowest of `units` winners above it (to a typical one for 1), with weights.
 
     With ``growth`` the amount grows like ``exp(growth * E)``, so the rule is stretched to see its whole mass.
@@ -295,18 +296,17 @@ def _fold(amount: Floats, outer: Floats, *inner: Floats) -> Floats:
 
 def _settle(sums: Floats) -> tuple[Floats, Floats]:
     """Value and error bound from the columns of `_fold`."""
-    value = sums[:, 0]
-    error = np.zeros_like(value)
-    for half in (1, 3, 5, 7):
-        error += bound(value, sums[:, half], sums[:, half + 1], np.abs(value) / 4.0)
-    return value, error
+    full = sums[:, :1]
+    rules = np.stack([np.broadcast_to(full, (full.size, 4)), sums[:, 1::2], sums[:, 2::2]], axis=-1)
+    return sums[:, 0], bound(rules, 0.25 * np.abs(full)).sum(axis=1)
 
 
 def _apply(amount: Floats, weights: Floats) -> Floats:
     """Sum the last axis under nested weights (nodes, 3) or (..., nodes, 3)."""
     if weights.ndim == 2:  # noqa: PLR2004
         return amount @ weights
-    return np.einsum("...n,...nr->...r", amount, weights)
+    summed: Floats = np.einsum("...n,...nr->...r", amount, weights)
+    return summed
 
 
 def _apply_outer(amount: Floats, outer: Floats) -> Floats:
@@ -334,7 +334,7 @@ def _slack(sizes: Sizes, functional: Functional, resolution: Resolution) -> tupl
             if over == "mean"
             else n * s * binomial_at_most(k - 1, n - 1, np.array(s), np.array(rest))
         )
-        return many * one[0], many * (bound(*one, np.abs(one[0])) + 1e-14 * np.abs(one[0]))
+        return many * one[0], many * (bound(one, np.abs(one[0])) + 1e-14 * np.abs(one[0]))
     place = Place(sizes.values, floor.at[:, None], floor.rest[:, None])
     draws = SlackDraws(sizes, place, share, resolution)
     if over == "best" and uses == {"threshold", "winner"}:
@@ -378,11 +378,11 @@ class SlackDraws:
             yield at, to_end, nested(weight * np.exp(-at))
 
     def _total(self, amount: Floats, weights: Floats) -> tuple[Floats, Floats]:
-        sums = (amount[:, None, :] @ weights)[:, 0, :]
-        return sums[:, 0], bound(*sums.T, np.abs(sums[:, 0])) + 1e-13 * np.abs(sums[:, 0])
+        value, error = settled(amount, weights)
+        return value, error + 1e-13 * np.abs(value)
 
     def best(self, functional: Functional) -> tuple[Floats, Floats]:
-        """The best eligible bidder's amount."""
+        """Return the best eligible bidder's amount and its error."""
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
         knots = [-self.sizes.bidders * np.log1p(-self.sizes.turnout * knot) for knot in self.sizes.knots]
         for exponent, _, weights in self._panels(knots):
@@ -419,7 +419,7 @@ class SlackDraws:
             yield ratio, inside / kept, self.rest / kept, weights
 
     def lowest(self, functional: Functional) -> tuple[Floats, Floats]:
-        """The lowest eligible bidder's amount."""
+        """Return the lowest eligible bidder's amount and its error."""
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
         for ratio, more, less, weights in self._lowest_nodes():
             others = binomial_at_most(self.k - 1, self.n - 1, more, less)
@@ -429,7 +429,7 @@ class SlackDraws:
         return value, error
 
     def sum_of_lowest(self, functional: Functional) -> tuple[Floats, Floats]:
-        """The number of winners times an amount of the lowest."""
+        """Return the number of winners times an amount of the lowest."""
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
         for ratio, more, less, weights in self._lowest_nodes():
             # contested draws here are those whose k-th bid is at least the reserve: at most k - 1 remain
@@ -441,7 +441,7 @@ class SlackDraws:
         return value, error
 
     def best_and_lowest(self, functional: Functional) -> tuple[Floats, Floats]:
-        """An amount of the best and the lowest of at most k - 1 winners; one alone counts with itself."""
+        """Return an amount of the best and the lowest of at most k - 1 winners; one alone is both."""
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
         for to_lowest, more, less, weights in self._lowest_nodes():
             alone = binomial_at_most(np.minimum(0.0, self.k - 2), self.n - 1, more, less)
@@ -474,9 +474,7 @@ class SlackDraws:
             itself = functional.amount(Ranked(self.place, self.share, lowest=to_lowest))
             part, part_error = self._total(itself * some, weights)
             value, error = value + part, error + part_error
-            knots = [
-                (np.log(self.place.at / knot) - to_lowest)[..., None] for knot in reversed(self.sizes.knots)
-            ]
+            knots = [(np.log(self.place.at / knot) - to_lowest)[..., None] for knot in reversed(self.sizes.knots)]
             to_other, inner = _exponential([np.maximum(k, 0.0) for k in knots], self.resolution)
             deep = Place(self.place.values, self.place.at[..., None], self.place.rest[..., None])
             amount = functional.amount(Ranked(deep, self.share, lowest=to_lowest[..., None], winner=to_other))

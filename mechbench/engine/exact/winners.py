@@ -49,15 +49,18 @@ class Place:
         """``1 - bid / (bid of up(log_ratio))``."""
         if not self._near_bottom:
             return self.values.relative_drop(self.at, log_ratio)
-        # From below, the digits lost are those of the ratio of the two; from above, those of 1 - s.
-        at, rest, ratio = np.broadcast_arrays(self.at, self.rest, log_ratio)
-        low = (rest < 0.5) & (rest * rest < ratio * at)  # noqa: PLR2004
-        above = self.values.relative_drop(np.where(low, 0.5, at), ratio)
+        # From above, the digits lost are those of 1 - s; from below, those of the ratio of the two.
+        drop = self.values.relative_drop(self.at, log_ratio)
+        low = (self.rest < 0.5) & (self.rest * self.rest < log_ratio * self.at)  # noqa: PLR2004
         if not low.any():
-            return above
-        top = np.broadcast_to(self.up(log_ratio).bid, ratio.shape)
-        below = np.where(top > 0, 1.0 - self.bid / np.where(top > 0, top, 1.0), 0.0)
-        return np.where(low, below, above)
+            return drop
+        at, rest, ratio, bid = (
+            np.broadcast_to(part, low.shape)[low] for part in (self.at, self.rest, log_ratio, self.bid)
+        )
+        top = Place(self.values, at, rest).up(ratio).bid
+        drop = np.array(np.broadcast_to(drop, low.shape))
+        drop[low] = np.where(top > 0, 1.0 - bid / np.where(top > 0, top, 1.0), 0.0)
+        return drop
 
 
 def _has_lower_quantile(values: Distribution) -> bool:
@@ -79,9 +82,7 @@ class Ranked:
         where no lowest is given) to the winner. ``None`` where the functional does not look.
     """
 
-    def __init__(
-        self, base: Place, share: float, lowest: Floats | None = None, winner: Floats | None = None
-    ) -> None:
+    def __init__(self, base: Place, share: float, lowest: Floats | None = None, winner: Floats | None = None) -> None:
         self._base = base
         self._share = share
         self._lowest = lowest
