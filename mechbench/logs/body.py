@@ -32,11 +32,14 @@ class Body:
         Shares of the bids, from 0 to ``1 - tail_share``, at which the sorted bids are cut.
     below : array (cells, levels + 1)
         Mean over each cell of ``threshold - Q`` for a slope of 1 at one level and 0 at the others.
+    drop : array (levels + 1,)
+        The same at the lower end.
     """
 
     levels: Floats
     cells: Floats
     below: Floats
+    drop: Floats
 
     def slopes(self, means: Floats, threshold: float, tail_scale: float) -> Floats:
         """Slopes ``dQ/dE`` at all levels but the last, where it is the tail's scale.
@@ -54,22 +57,16 @@ class Body:
         free = self.below[:, :-1]
         short = threshold - means - self.below[:, -1] * tail_scale - free.sum(axis=1) * least
         weight = np.sqrt(np.diff(self.cells)) / (means + _WEIGHT_FLOOR * np.median(means))
-        drop = self._drop()
-        room = threshold - drop[-1] * tail_scale - drop[:-1].sum() * least
+        drop, last = self.drop[:-1], self.drop[-1]
+        room = threshold - last * tail_scale - drop.sum() * least
         found = nnls(free * weight[:, None], short * weight)[0]
-        if found @ drop[:-1] > room:
+        if found @ drop > room:
             heavy = _HEAVY * weight.max() / drop.max()
-            rows = np.vstack([free * weight[:, None], heavy * drop[:-1]])
+            rows = np.vstack([free * weight[:, None], heavy * drop])
             found = nnls(rows, np.append(short * weight, heavy * room))[0]
-            found *= min(1.0, room / (found @ drop[:-1]))
+            found *= min(1.0, room / (found @ drop))
         slopes: Floats = found + least
         return slopes
-
-    def _drop(self) -> Floats:
-        """``threshold - Q`` at the lower end for a slope of 1 at each level."""
-        steps = np.diff(0.0 - np.log(self.levels)) / 2
-        drop: Floats = np.append(steps, 0.0) + np.append(0.0, steps)
-        return drop
 
 
 @lru_cache(maxsize=64)
@@ -98,7 +95,8 @@ def body_plan(tail_share: float, widest_last: float = math.inf) -> Body:
     below = _below(levels, 0.0 - np.log1p(-shares))
     probabilities = np.exp(-levels)
     probabilities[-1] = tail_share
-    return Body(probabilities, cells, np.einsum("cnl,n->cl", below, weights / 2))
+    at_lower_end = _below(levels, np.zeros(1))[0]
+    return Body(probabilities, cells, np.einsum("cnl,n->cl", below, weights / 2), at_lower_end)
 
 
 def _below(levels: Floats, at: Floats) -> Floats:
