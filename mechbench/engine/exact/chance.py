@@ -15,6 +15,8 @@ from mechbench.engine.exact.winners import Place, Ranked
 
 __all__ = ["chance_above"]
 
+_STEPS = 56
+"""Bisections to the last digit."""
 _FURTHEST = 640.0
 """Log ratio that stands for "as high as values go"; tail probabilities stay representable."""
 
@@ -46,7 +48,7 @@ def _amount(functional: Functional, place: Place, share: float, ratio: Floats) -
     return functional.amount(Ranked(place, share, lowest=ratio))
 
 
-def _bisect(passed: Callable[[Floats], NDArray[np.bool_]], low: Floats, high: Floats, steps: int = 56) -> Floats:
+def _bisect(passed: Callable[[Floats], NDArray[np.bool_]], low: Floats, high: Floats, steps: int) -> Floats:
     """Point where a rising condition starts to hold, between `low` (not yet) and `high`."""
     for _ in range(steps):
         middle = 0.5 * (low + high)
@@ -55,7 +57,7 @@ def _bisect(passed: Callable[[Floats], NDArray[np.bool_]], low: Floats, high: Fl
     return high
 
 
-def _ratio_at(functional: Functional, place: Place, share: float, level: float) -> Floats:
+def _ratio_at(functional: Functional, place: Place, share: float, level: float, steps: int) -> Floats:
     """Log ratio beyond which the amount exceeds the level; inf where it never does."""
 
     def passed(log_of_ratio: Floats) -> NDArray[np.bool_]:
@@ -63,7 +65,7 @@ def _ratio_at(functional: Functional, place: Place, share: float, level: float) 
 
     low = np.full(place.at.shape, np.log(1e-18))
     high = np.full(place.at.shape, np.log(_FURTHEST))
-    ratio = np.exp(_bisect(passed, low, high))
+    ratio = np.exp(_bisect(passed, low, high, steps))
     reaches = passed(high)
     at_once = passed(low)
     return np.where(at_once, 0.0, np.where(reaches, ratio, np.inf))
@@ -72,8 +74,11 @@ def _ratio_at(functional: Functional, place: Place, share: float, level: float) 
 def _contested(sizes: Sizes, functional: Functional, level: float, resolution: Resolution) -> tuple[Floats, Floats]:
     rank = sizes.units + 1.0
     value, error = np.zeros_like(rank), np.zeros_like(rank)
-    for nodes in contested_nodes(sizes, rank, 0.0, resolution, _first_reach(sizes, functional, level)):
-        ratio = _ratio_at(functional, nodes.place, 1.0, level)
+    start = _first_reach(sizes, functional, level)
+    knots = () if resolution.loose else sizes.knots
+    breaks = [_where_at_knot(sizes, functional, level, knot) for knot in knots]
+    for nodes in contested_nodes(sizes, rank, 0.0, resolution, start, breaks):
+        ratio = _ratio_at(functional, nodes.place, 1.0, level, _STEPS // 2 if resolution.loose else _STEPS)
         units = sizes.units[:, None]
         if functional.over == "best":
             with np.errstate(divide="ignore"):
@@ -97,14 +102,29 @@ def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats |
 
     if passed(low).all():
         return None
-    return _bisect(passed, low, high)
+    return _bisect(passed, low, high, _STEPS)
+
+
+def _where_at_knot(sizes: Sizes, functional: Functional, level: float, knot: float) -> Floats:
+    """Log-odds of the threshold for which the winner at the family's knot has just the level."""
+    law = sizes.law(sizes.units + 1.0)
+    low, high = law.reach(0.0)
+
+    def passed(y: Floats) -> NDArray[np.bool_]:
+        s, rest, _ = law.at(y[:, None])
+        place = sizes.place(s, rest)
+        below = place.at > knot
+        ratio = np.log(np.where(below, place.at / knot, 1.0))
+        return ((_amount(functional, place, 1.0, ratio) > level) & below)[:, 0]
+
+    return _bisect(passed, low, high, _STEPS)
 
 
 def _slack(sizes: Sizes, functional: Functional, level: float, resolution: Resolution) -> tuple[Floats, Floats]:
     floor, share = sizes.floor
     place = Place(sizes.values, floor.at[:, None], floor.rest[:, None])
     draws = SlackDraws(sizes, place, share, resolution)
-    ratio = float(_ratio_at(functional, floor, share, level)[0])
+    ratio = float(_ratio_at(functional, floor, share, level, _STEPS)[0])
     if np.isinf(ratio):
         return np.zeros_like(sizes.units), np.zeros_like(sizes.units)
     counted = Functional(functional.over, functional.uses, lambda _: np.ones((1, 1)))

@@ -24,7 +24,7 @@ from mechbench.contract import Floats, InterimPrice
 from mechbench.engine.exact.order import OrderLaw, binomial_at_most
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.supply_use import units_unsold
-from mechbench.engine.exact.units import Resolution
+from mechbench.engine.exact.units import LOOSE, Resolution
 from mechbench.engine.exact.winners import Place
 
 __all__ = ["interim_gain"]
@@ -54,9 +54,13 @@ def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, f
     winners = float((sizes.units * (1.0 - unsold))[0] / sizes.bidders[0])
     slack = float(unsold_error[0] * sizes.units[0] / sizes.bidders[0]) / winners
     goal = 0.1 * error * winners
-    coarse, _ = _gained(_grid(sizes, price, 12), sizes, price, goal)
-    for panels in (24, 48, 96):
-        fine, unsettled = _gained(_grid(sizes, price, panels), sizes, price, goal)
+    loose = error >= LOOSE
+    first = 6 if loose else 12
+    coarse, _ = _gained(_grid(sizes, price, first, 12 if loose else 34), sizes, price, goal)
+    for panels in (2 * first, 4 * first, 8 * first):
+        fine, unsettled = _gained(
+            _grid(sizes, price, panels, 12 if loose and panels == 2 * first else 34), sizes, price, goal
+        )
         bound = (abs(fine - coarse) + unsettled + (1e-13 + slack) * fine) / winners
         if bound <= error:
             break
@@ -76,6 +80,8 @@ class _Reports:
         G.
     slope : array (nodes,)
         W times the report's slope over the log-odds.
+    steps : int
+        Golden-section steps towards the best report.
     """
 
     law: OrderLaw
@@ -85,6 +91,7 @@ class _Reports:
     place: Place
     wins: Floats
     slope: Floats
+    steps: int
 
     @cached_property
     def antiderivative(self) -> Floats:
@@ -92,7 +99,8 @@ class _Reports:
         table = self.slope.reshape(-1, _ORDER)
         basis = np.polynomial.legendre.legvander(_NODES, _ORDER - 1)
         coefficients = ((table * _WEIGHTS) @ basis) * (np.arange(_ORDER) + 0.5)
-        return np.polynomial.legendre.legint(coefficients, lbnd=-1, axis=1)
+        integral: Floats = np.polynomial.legendre.legint(coefficients, lbnd=-1, axis=1).astype(np.float64)
+        return integral
 
     @cached_property
     def from_panel(self) -> Floats:
@@ -186,7 +194,7 @@ def _best_gain(grid: _Reports, sizes: Sizes, price: InterimPrice, values: _Value
     return np.maximum(best, _at_floor(sizes, price, values))
 
 
-def _grid(sizes: Sizes, price: InterimPrice, panels: int) -> _Reports:
+def _grid(sizes: Sizes, price: InterimPrice, panels: int, steps: int) -> _Reports:
     law = OrderLaw(sizes.units, sizes.bidders - 1.0)
     lo, hi = (float(end[0]) for end in law.reach(0.0))
     cut = float(law.log_odds(sizes.chance, sizes.chance_not)[0])
@@ -210,7 +218,7 @@ def _grid(sizes: Sizes, price: InterimPrice, panels: int) -> _Reports:
         with np.errstate(divide="ignore", over="ignore"):
             steep = s * rest / (sizes.turnout * sizes.values.density(place.bid))
         slope = np.where(np.isfinite(steep), steep, 0.0) * _weight(sizes, price, s, rest, wins)
-    return _Reports(law, edge, y, s, place, wins, slope)
+    return _Reports(law, edge, y, s, place, wins, slope, steps)
 
 
 def _weight(sizes: Sizes, price: InterimPrice, s: Floats, rest: Floats, wins: Floats) -> Floats:
@@ -256,7 +264,7 @@ def _between_neighbours(
     left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_left, at_right = gain(left), gain(right)
     best = np.maximum(np.maximum(at_left, at_right), 0.0)
-    for _ in range(34):
+    for _ in range(grid.steps):
         lower = at_left > at_right
         low, high = np.where(lower, low, left), np.where(lower, right, high)
         probe = np.where(lower, high - _GOLDEN * (high - low), low + _GOLDEN * (high - low))

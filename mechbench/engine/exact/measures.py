@@ -150,7 +150,7 @@ def _efficiency(sizes: Sizes, welfare: Functional, error: float) -> tuple[Floats
 
 def _refined(sizes: Sizes, route: _Route, error: float, *, relative: bool) -> tuple[Floats, Floats]:
     """Run a route on finer and finer rules, each time only where the bound is still too large."""
-    resolution = Resolution()
+    resolution = Resolution.enough_for(error)
     value, bounds = route(sizes, resolution)
     for _ in range(_REFINEMENTS):
         allowed = error * np.abs(value) if relative else np.full_like(value, error)

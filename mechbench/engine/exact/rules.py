@@ -16,7 +16,7 @@ import numpy as np
 
 from mechbench.contract import Floats
 
-__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "settled", "tame"]
+__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "settled", "smooth", "tame"]
 
 EXPONENT = 34.0
 """Mass below ``exp(-34) = 2e-15`` of the peak is left out."""
@@ -87,6 +87,43 @@ def _tanh_sinh(nodes: int) -> tuple[Floats, Floats, Floats]:
     odds = np.exp(np.pi * np.sinh(grid))
     near, far = odds / (1.0 + odds), 1.0 / (1.0 + odds)
     return near, far, (grid[1] - grid[0]) * np.pi * np.cosh(grid) * near * far
+
+
+def smooth(lo: Floats, hi: Floats, nodes: int) -> tuple[Floats, Floats, Floats]:
+    """Clenshaw-Curtis nodes on [lo, hi] for an integrand that is smooth up to both ends.
+
+    Parameters
+    ----------
+    lo, hi : arrays of one shape
+    nodes : int
+        4 m + 1.
+
+    Returns
+    -------
+    from_lo, from_hi : arrays (..., nodes)
+        Distances of each node from the two ends, each with all its digits.
+    weights : array (..., nodes, 3)
+        Nested: all nodes, every second, every fourth.
+    """
+    near, weights = _clenshaw_curtis(nodes)
+    width = (hi - lo)[..., None]
+    return width * near, width * near[::-1], width[..., None] * weights
+
+
+@lru_cache(maxsize=32)
+def _clenshaw_curtis(nodes: int) -> tuple[Floats, Floats]:
+    """Nodes and nested weights on [0, 1]."""
+    near = np.sin(np.linspace(0.0, 0.5 * np.pi, nodes)) ** 2
+    weights = np.zeros((nodes, 3))
+    for column, step in enumerate((1, 2, 4)):
+        count = (nodes - 1) // step
+        angle = np.pi * np.arange(count + 1) / count
+        harmonic = np.arange(1, count // 2 + 1)
+        share = np.where(2 * harmonic == count, 1.0, 2.0) / (4.0 * harmonic**2 - 1.0)
+        rule = (1.0 - np.cos(2.0 * np.outer(angle, harmonic)) @ share) / count
+        rule[[0, -1]] *= 0.5
+        weights[::step, column] = rule
+    return near, weights
 
 
 def cut_off(lo: Floats, hi: Floats, width: Floats, nodes: int) -> tuple[Floats, Floats]:

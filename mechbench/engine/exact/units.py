@@ -16,20 +16,22 @@ Two kinds of draw are integrated apart, because the threshold jumps in kind betw
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import astuple, dataclass
 from itertools import pairwise
 
 import numpy as np
 
 from mechbench.contract import Floats, Functional
 from mechbench.engine.exact.order import binomial_at_most, binomial_between
-from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, settled, tame
+from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, settled, smooth, tame
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.winners import Place, Ranked
 
-__all__ = ["Contested", "NoRouteError", "Resolution", "SlackDraws", "contested_nodes", "expectation"]
+__all__ = ["LOOSE", "Contested", "NoRouteError", "Resolution", "SlackDraws", "contested_nodes", "expectation"]
 
+LOOSE = 1e-6
+"""Errors asked for from here on are met with fewer nodes and shorter searches."""
 _BLOCK = 1 << 15
 """Quadrature nodes evaluated at once: what a core's cache holds, so that many sizes cost no more each than one."""
 
@@ -46,10 +48,21 @@ class Resolution:
     cut: int = 129
     inner: int = 65
     slack: int = 129
+    smooth: int = 33
+
+    @classmethod
+    def enough_for(cls, error: float) -> Resolution:
+        """Where to start for an error that is asked for."""
+        return cls() if error < LOOSE else cls(outer=33, cut=65, inner=33, slack=65, smooth=17)
+
+    @property
+    def loose(self) -> bool:
+        """Whether this is where a loose error starts, and not a refinement."""
+        return self.smooth < 33  # noqa: PLR2004
 
     def finer(self) -> Resolution:
         """Twice the nodes."""
-        return Resolution(2 * self.outer - 1, 2 * self.cut - 1, 2 * self.inner - 1, 2 * self.slack - 1)
+        return Resolution(*(2 * nodes - 1 for nodes in astuple(self)))
 
 
 @dataclass(frozen=True)
@@ -77,19 +90,26 @@ class Contested:
 
 
 def contested_nodes(
-    sizes: Sizes, rank: Floats, growth: float, resolution: Resolution, start: Floats | None = None
+    sizes: Sizes,
+    rank: Floats,
+    growth: float,
+    resolution: Resolution,
+    start: Floats | None = None,
+    breaks: Sequence[Floats] = (),
 ) -> Iterator[Contested]:
     """Outer nodes for the rank-th highest bid where it is at least the reserve, panel by panel.
 
-    With `start`, log-odds (cells,), only bids at or below that place are integrated over.
+    With `start`, log-odds (cells,), only bids at or below that place are integrated over; `breaks` are further
+    log-odds (cells,) at which the integrand is not smooth. With either, `knots_below` is not told.
     """
     law = sizes.law(rank)
     lo, hi = law.reach(growth)
     cut = law.log_odds(sizes.chance, sizes.chance_not)
     knots = sizes.knots
+    told = start is None and not breaks
     if start is not None:
         lo = np.clip(start, lo, hi)
-    elif not knots and (cut >= hi).all():
+    elif told and not knots and (cut >= hi).all():
         y, weight = tame(lo, hi, law.slow_tail, resolution.outer)
         s, rest, density = law.at(y)
         yield Contested(sizes.place(s, rest, None), nested(weight * density), ())
@@ -99,27 +119,33 @@ def contested_nodes(
     for knot in knots:
         at = sizes.turnout * knot
         edges.append(np.clip(law.log_odds(at, 1.0 - at), lo, np.maximum(stop, lo)))
-    edges.append(np.maximum(stop, lo))
+    edges += [np.clip(place, lo, np.maximum(stop, lo)) for place in breaks]
+    edges = [*np.sort(np.stack(edges), axis=0), np.maximum(stop, lo)]
     last = len(edges) - 2
     for panel, (left, right) in enumerate(pairwise(edges)):
         if (right <= left).all():
             continue
         # y = sinh t shortens the long exponential tails; the distance to the cut keeps its digits
         begin, end = np.arcsinh(left), np.arcsinh(right)
-        if panel == last and start is None:
+        if 0 < panel < last:
+            from_lo, from_hi, weights = smooth(begin, end, resolution.smooth)
+        elif panel == last and start is None:
             from_hi, weight = cut_off(begin, end, law.width, resolution.cut)
-            t = end[:, None] - from_hi
+            from_lo, weights = (end - begin)[:, None] - from_hi, nested(weight)
         else:
             from_lo, from_hi, weight = finite(begin, end, resolution.cut)
-            t = np.where(from_lo < from_hi, begin[:, None] + from_lo, end[:, None] - from_hi)
+            weights = nested(weight)
+        t = np.where(from_lo < from_hi, begin[:, None] + from_lo, end[:, None] - from_hi)
         s, rest, density = law.at(np.sinh(t))
-        weight = weight * np.cosh(t) * (right > left)[:, None]
+        density = density * np.cosh(t) * (right > left)[:, None]
         to_floor = None
         if sizes.chance_not > 0 and panel == last:
             to_end = 2.0 * np.cosh(end[:, None] - 0.5 * from_hi) * np.sinh(0.5 * from_hi)
             to_cut = np.minimum((cut - right)[:, None] + to_end, 700.0)
             to_floor = sizes.chance * rest * -np.expm1(-to_cut)
-        yield Contested(sizes.place(s, rest, to_floor), nested(weight * density), tuple(knots[:panel]))
+        yield Contested(
+            sizes.place(s, rest, to_floor), weights * density[..., None], tuple(knots[:panel]) if told else ()
+        )
 
 
 def expectation(sizes: Sizes, functional: Functional, resolution: Resolution) -> tuple[Floats, Floats]:
@@ -171,7 +197,7 @@ def _inner_size(functional: Functional, nodes: Contested, resolution: Resolution
     dimensions = max(0, len(functional.uses) - 1)
     if "winner" in functional.uses and len(functional.uses) == 1:
         dimensions = 1
-    return int((resolution.inner if panels == 1 else panels * resolution.cut) ** dimensions)
+    return int((resolution.inner if panels == 1 else resolution.inner + panels * resolution.smooth) ** dimensions)
 
 
 def _inner(sizes: Sizes, functional: Functional, nodes: Contested, resolution: Resolution) -> Floats:
@@ -235,13 +261,20 @@ def _typical(nodes: Contested, units: Floats, resolution: Resolution, growth: fl
 
 def _best(nodes: Contested, units: Floats, resolution: Resolution) -> tuple[Floats, Floats]:
     """Log ratios from a bid up to the best of `units` winners above it, with weights."""
-    knots = [-units * np.log1p(-(knot / nodes.place.at))[..., None] for knot in nodes.knots_below]
-    exponential, weights = _exponential(knots, resolution)
+    knots = [
+        -units * np.log1p(-np.minimum(knot / nodes.place.at, 1.0 - 1e-16))[..., None] for knot in nodes.knots_below
+    ]
+    exponential, weights = _exponential(knots, resolution, deep_first=True)
     return -np.log(-np.expm1(-exponential / units)), weights
 
 
-def _exponential(breaks: list[Floats], resolution: Resolution, growth: float = 0.0) -> tuple[Floats, Floats]:
-    """Nodes and nested weights for the mean over a standard exponential, split at rising breaks (..., 1)."""
+def _exponential(
+    breaks: list[Floats], resolution: Resolution, growth: float = 0.0, *, deep_first: bool = False
+) -> tuple[Floats, Floats]:
+    """Nodes and nested weights for the mean over a standard exponential, split at rising breaks (..., 1).
+
+    With `deep_first` the far end of the tail is at E = 0 and the function may be singular there.
+    """
     nodes, weight = decaying(resolution.inner)
     if growth > 0:
         stretch = 1.0 / (1.0 - growth)
@@ -251,12 +284,16 @@ def _exponential(breaks: list[Floats], resolution: Resolution, growth: float = 0
     limit = EXPONENT / (1.0 - growth)
     pieces, weights = [], []
     left = np.zeros_like(breaks[0][..., 0])
-    for stop in breaks:
+    for piece, stop in enumerate(breaks):
         right = np.clip(stop[..., 0], left, limit)
-        from_left, _, panel = finite(left, right, resolution.cut)
+        if deep_first and piece == 0:
+            from_left, _, weight_here = finite(left, right, resolution.cut)
+            rule = nested(weight_here)
+        else:
+            from_left, _, rule = smooth(left, right, resolution.smooth)
         at = left[..., None] + from_left
         pieces.append(at)
-        weights.append(nested(panel * np.exp(-at)))
+        weights.append(rule * np.exp(-at)[..., None])
         left = right
     pieces.append(left[..., None] + nodes)
     weights.append(nested(np.exp(-left)[..., None] * weight))
