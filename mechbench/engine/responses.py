@@ -37,10 +37,13 @@ _LEVELS = 1.0 / (1.0 + np.exp(-np.linspace(-8.0, 8.0, 49)))
 """Chances of winning at which reports are laid out, even in log-odds."""
 _FLOOR = 0.2
 """Share of the values drawn evenly, whatever their chance to win."""
-_PILOT_SHARE = 1.6
-_PILOT_DRAWS = (2**12, 2**20)
+_PILOT_SHARE = 2.5
+"""The loss from choosing falls with the power 2/3 of the pilot's draws, so these rise with 3/2 of 1 / error."""
+_LEAST_PILOT, _MOST_PILOT = 2**13, 2**20
 _PILOT_BIDS = 2**27
-"""Bound on the bids that the pilot evaluates for one mechanism."""
+"""Bound on the bids that the pilot evaluates for one mechanism, unless so many are in this few draws:"""
+_FEWEST_PILOT = 32
+_PILOT_BLOCK = 2**16
 _SAME = 1e-9
 
 
@@ -79,15 +82,23 @@ class InterimDraws:
     Each mechanism fills three columns: the weighted gain over value, the weight where truth wins, 1 there.
     """
 
-    def __init__(self, market: Market, mechanisms: Sequence[Mechanism], seed: int, error: float) -> None:
+    def __init__(
+        self,
+        market: Market,
+        mechanisms: Sequence[Mechanism],
+        seed: int,
+        error: float,
+        max_draws: int | None = None,
+    ) -> None:
         self._market, self._mechanisms = market, mechanisms
         self._widths = [min(depth_of(mechanism, market), market.bidders - 1) for mechanism in mechanisms]
         self._edges = tiers(market.supply.units, market.bidders - 1, max(self._widths))
-        count = len(self._edges)
-        self._rivals = generators(market, seed, 2, count)
+        self._rivals = generators(market, seed, 2, len(self._edges))
         (self._values,) = generators(market, seed, 3, 1)
         self._layout = _lay_out(market, generators(market, seed, 4, 1)[0])
-        self._answers = self._learn(generators(market, seed, 5, count), error)
+        most = _MOST_PILOT if max_draws is None else min(max_draws, _MOST_PILOT)
+        pilot = max(_LEAST_PILOT, min(most, int((_PILOT_SHARE / max(error, _SAME)) ** 1.5)))
+        self._answers = [self._learn(index, seed, pilot) for index in range(len(mechanisms))]
 
     @property
     def notes(self) -> dict[tuple[int, str], str]:
@@ -106,12 +117,13 @@ class InterimDraws:
 
     def fill(self, rows: Floats) -> None:
         """Write the next draws' columns into `rows`, array (draws, columns)."""
-        rivals = self._rival_bids(self._rivals, len(rows))
+        tails = lowest_uniforms(self._rivals, len(rows), self._market.bidders - 1, self._edges)
+        rivals = bids_at(self._market, tails)
         place = self._values.random(len(rows)) * _CELLS
         cell = np.minimum(place.astype(np.intp), _CELLS - 1)
         lengths = np.diff(self._layout.edges)
-        tails = self._layout.edges[cell] + (place - cell) * lengths[cell]
-        value = self._market.values.upper_quantile(np.maximum(tails, _TINY) / self._market.turnout)
+        tail = self._layout.edges[cell] + (place - cell) * lengths[cell]
+        value = self._market.values.upper_quantile(np.maximum(tail, _TINY) / self._market.turnout)
         weight = lengths[cell] / lengths.max()
         for index, answer in enumerate(self._answers):
             others = rivals[:, : self._widths[index]]
@@ -148,20 +160,11 @@ class InterimDraws:
         fall_left, fall_right = here - utility[row, place - 1], here - utility[row, place + 1]
         left, right = reports[place] - reports[place - 1], reports[place + 1] - reports[place]
         bend = fall_left * right + fall_right * left
-        peak = (
-            (fall_left >= 0)
-            & (fall_right >= 0)
-            & (bend > 0)
-            & (reports[place] != self._market.supply.reserve)
-        )
+        peak = (fall_left >= 0) & (fall_right >= 0) & (bend > 0) & (reports[place] != self._market.supply.reserve)
         shift = np.zeros_like(value)
         np.divide(fall_left * right**2 - fall_right * left**2, 2.0 * bend, out=shift, where=peak)
         best = np.where(peak, reports[place] + shift, reports[utility.argmax(axis=1)])
         return np.where(answer.truthful[cell], value, best)
-
-    def _rival_bids(self, sources: Sequence[np.random.Generator], draws: int) -> Floats:
-        tails = lowest_uniforms(sources, draws, self._market.bidders - 1, self._edges)
-        return bids_at(self._market, tails)
 
     def _report(self, index: int, report: Floats | float, others: Floats) -> tuple[Floats, Floats]:
         """Allocation and payment of a report put before the rivals' bids (so that it wins ties)."""
@@ -171,35 +174,31 @@ class InterimDraws:
         outcome = self._mechanisms[index].outcome(bids, self._market.supply)
         return outcome.allocation[:, 0], outcome.payment[:, 0]
 
-    def _learn(self, sources: Sequence[np.random.Generator], error: float) -> list[_Answer]:
-        reports = self._layout.reports
-        draws = int(np.clip((_PILOT_SHARE / error) ** 1.5, *_PILOT_DRAWS))
-        draws = max(32, min(draws, _PILOT_BIDS // (len(reports) * (self._edges[-1] + 1))))
-        chance = np.zeros((len(self._mechanisms), len(reports)))
-        paid = np.zeros_like(chance)
-        block = max(1, 2**16 // self._edges[-1])
+    def _learn(self, index: int, seed: int, pilot: int) -> _Answer:
+        """Try every report of the layout on pilot draws, made for this mechanism alone."""
+        market, reports, width = self._market, self._layout.reports, self._widths[index]
+        edges = tiers(market.supply.units, market.bidders - 1, width)
+        sources = generators(market, seed, 5, len(edges))
+        draws = max(_FEWEST_PILOT, min(pilot, _PILOT_BIDS // (len(reports) * (width + 1))))
+        chance, paid = np.zeros_like(reports), np.zeros_like(reports)
+        block = max(1, _PILOT_BLOCK // edges[-1])
         for start in range(0, draws, block):
-            rivals = self._rival_bids(sources, min(block, draws - start))
-            for index, width in enumerate(self._widths):
-                others = rivals[:, :width]
-                for place, report in enumerate(reports):
-                    won, payment = self._report(index, report, others)
-                    chance[index, place] += won.sum()
-                    paid[index, place] += payment.sum()
+            tails = lowest_uniforms(sources, min(block, draws - start), market.bidders - 1, edges)
+            others = bids_at(market, tails)[:, :width]
+            for place, report in enumerate(reports):
+                won, payment = self._report(index, report, others)
+                chance[place] += won.sum()
+                paid[place] += payment.sum()
+        chance, paid = chance / draws, paid / draws
         centres = self._layout.centres
         truth = np.searchsorted(reports, centres)
-        return [
-            _Answer(a / draws, p / draws, _truth_is_best(centres, a / draws, p / draws, truth))
-            for a, p in zip(chance, paid, strict=True)
-        ]
+        return _Answer(chance, paid, _truth_is_best(centres, chance, paid, truth))
 
 
 _TINY = float(np.finfo(np.float64).tiny)
 
 
-def _truth_is_best(
-    centres: Floats, chance: Floats, paid: Floats, truth: NDArray[np.intp]
-) -> NDArray[np.bool_]:
+def _truth_is_best(centres: Floats, chance: Floats, paid: Floats, truth: NDArray[np.intp]) -> NDArray[np.bool_]:
     """Whether no report of the grid beats truth in the middle of each cell, array (cells,)."""
     utility = centres[:, None] * chance - paid
     at_truth = utility[np.arange(len(centres)), truth]

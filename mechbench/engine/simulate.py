@@ -166,7 +166,7 @@ def simulate(
         crowd = CrowdDraws(market, mechanisms, of_draws, seed, threshold)
         found = _until_known(found, crowd, of_draws, max_draws, progress)
     if "interim_gain" in measures:
-        interim = InterimDraws(market, mechanisms, seed, error)
+        interim = InterimDraws(market, mechanisms, seed, error, max_draws)
         found = _until_known(found, interim, ["interim_gain"], max_draws, progress)
     return found
 
