@@ -374,17 +374,16 @@ def _slack(sizes: Sizes, functional: Functional, resolution: Resolution) -> tupl
         return many * one[0], many * (bound(one, np.abs(one[0])) + 1e-14 * np.abs(one[0]))
     place = Place(sizes.values, floor.at[:, None], floor.rest[:, None])
     draws = SlackDraws(sizes, place, share, resolution)
-    if over == "best" and uses == {"threshold", "winner"}:
-        return draws.best(functional)
-    if over == "lowest" and uses == {"threshold", "lowest"}:
-        return draws.lowest(functional)
-    if over == "sum" and uses == {"lowest"}:
-        return draws.sum_of_lowest(functional)
-    if over == "best" and uses == {"winner", "lowest"}:
-        return draws.best_and_lowest(functional)
-    if over == "mean" and uses == {"threshold", "winner", "lowest"}:
-        return draws.mean_with_lowest(functional)
-    raise NoRouteError(_no_route(functional))
+    routes = {
+        ("best", frozenset({"threshold", "winner"})): draws.best,
+        ("lowest", frozenset({"threshold", "lowest"})): draws.lowest,
+        ("sum", frozenset({"lowest"})): draws.sum_of_lowest,
+        ("best", frozenset({"winner", "lowest"})): draws.best_and_lowest,
+        ("mean", frozenset({"threshold", "winner", "lowest"})): draws.mean_with_lowest,
+    }
+    if (over, uses) not in routes:
+        raise NoRouteError(_no_route(functional))
+    return routes[over, uses](functional)
 
 
 class SlackDraws:
