@@ -100,14 +100,16 @@ class OrderLaw:
         other = high / (low + high)
         s = mode * np.exp(y) / scale  # not 1 + growth: deep in the tail that is 0
         rest = other / scale
-        over, under = growth * other / scale, mode * growth / scale
-        exponent = low * _log1p_beyond_linear(over) + high * _log1p_beyond_linear(-under)
+        both = np.stack([growth * other / scale, -mode * growth / scale])
+        beyond = _log1p_beyond_linear(both)
+        exponent = low * beyond[0] + high * beyond[1]
         return s, rest, np.exp(exponent + self._log_peak()[:, None])
 
     def _log_peak(self) -> Floats:
         low, high = self.rank, self.above
         total = low + high
-        stirling = _stirling_remainder(total) - _stirling_remainder(low) - _stirling_remainder(high)
+        remainders = _stirling_remainder(np.stack([total, low, high]))
+        stirling = remainders[0] - remainders[1] - remainders[2]
         return 0.5 * np.log(low / total * high / (2.0 * np.pi)) + stirling
 
 

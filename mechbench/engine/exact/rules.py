@@ -156,14 +156,14 @@ def cut_off(lo: Floats, hi: Floats, width: Floats, nodes: int) -> tuple[Floats, 
 
 @lru_cache(maxsize=32)
 def decaying(nodes: int) -> tuple[Floats, Floats]:
-    """Nodes E and weights w so that ``sum w f(E)`` is the mean of f over a standard exponential.
+    """Nodes E and nested weights w so that ``sum w f(E)`` is the mean of f over a standard exponential.
 
     The function may be singular like a logarithm or a power at 0, and grow like a power of E.
     """
     ends = np.log1p(EXPONENT + np.sqrt(2.0 * EXPONENT))
     y, weight = tame(np.array([-EXPONENT - 1.0]), np.array([ends]), np.array([-1]), nodes)
     exponential = np.exp(y[0])
-    return exponential, weight[0] * exponential * np.exp(-exponential)
+    return exponential, nested(weight[0] * exponential * np.exp(-exponential))
 
 
 def nested(weights: Floats) -> Floats:

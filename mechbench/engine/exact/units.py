@@ -278,9 +278,9 @@ def _exponential(
     nodes, weight = decaying(resolution.inner)
     if growth > 0:
         stretch = 1.0 / (1.0 - growth)
-        nodes, weight = nodes * stretch, weight * np.exp(-nodes * (stretch - 1.0)) * stretch
+        nodes, weight = nodes * stretch, weight * (np.exp(-nodes * (stretch - 1.0)) * stretch)[:, None]
     if not breaks:
-        return nodes, nested(weight)
+        return nodes, weight
     limit = EXPONENT / (1.0 - growth)
     pieces, weights = [], []
     left = np.zeros_like(breaks[0][..., 0])
@@ -296,7 +296,7 @@ def _exponential(
         weights.append(rule * np.exp(-at)[..., None])
         left = right
     pieces.append(left[..., None] + nodes)
-    weights.append(nested(np.exp(-left)[..., None] * weight))
+    weights.append(np.exp(-left)[..., None, None] * weight)
     return np.concatenate(pieces, axis=-1), np.concatenate(weights, axis=-2)
 
 
