@@ -1,0 +1,1 @@
+"""The choice: evidence for every rule, the decision, and its words."""
