@@ -98,7 +98,7 @@ class Empirical(Distribution):
         values[0] = max(values[0], 0.0)
         self._values, self._slopes = values, slopes[:-1]
         self._curves = np.diff(slopes) / (2 * steps)
-        self._end = self._starts[-1]
+        self._end = float(self._starts[-1])
         self._steps = steps
         self._furthest = _LEAST_SHARE
         if self._index > 0:
@@ -174,7 +174,7 @@ class Empirical(Distribution):
         """``1 - Q(s) / Q(s * exp(-log_ratio))``, small ones by steps along the spline."""
         lower = np.minimum(0.0 - np.log(s), self._furthest)
         higher_value = self._quantile(np.minimum(lower + log_ratio, self._furthest))
-        drop = higher_value - self._quantile(lower)
+        drop = np.asarray(higher_value - self._quantile(lower))
         near = drop < _NEAR * higher_value
         if near.any():
             lower, step = (np.broadcast_to(part, drop.shape)[near] for part in (lower, log_ratio))
@@ -192,7 +192,8 @@ class Empirical(Distribution):
         piece, into = self._piece(at)
         body = self._slopes[piece] + 2.0 * into * self._curves[piece]
         with np.errstate(over="ignore"):
-            return body * np.exp(self._index * (scale - at))
+            slope: Floats = body * np.exp(self._index * (scale - at))
+        return slope
 
     def _body(self, at: Floats) -> Floats:
         """Q at E <= E_u."""
@@ -234,13 +235,15 @@ class Empirical(Distribution):
         above = np.clip(x, self._values[0], self._threshold) - self._values[piece]
         slope = self._slopes[piece]
         root = np.sqrt(np.maximum(slope * slope + 4.0 * self._curves[piece] * above, 0.0))
-        body = np.minimum(self._starts[piece] + 2.0 * above / (slope + root), self._end)
+        body: Floats = np.minimum(self._starts[piece] + 2.0 * above / (slope + root), self._end)
         excess = np.maximum(x - self._threshold, 0.0) / self._scale
         if self._index == 0:
-            return body + excess
+            body += excess
+            return body
         with np.errstate(divide="ignore"):
             beyond = np.log1p(np.maximum(self._index * excess, -1.0)) / self._index
-        return body + (beyond if self._index > 0 else np.where(x < self.support[1], beyond, math.inf))
+        body += beyond if self._index > 0 else np.where(x < self.support[1], beyond, math.inf)
+        return body
 
     def _rise(self, lower: Floats, step: Floats) -> Floats:
         """``Q(E + step) - Q(E)`` as a sum of positive parts, arrays (nodes,)."""
@@ -252,10 +255,11 @@ class Empirical(Distribution):
         to_next = np.where(last > first, self._starts[first + 1] - start, within)
         between = np.where(last > first, self._starts[last] - self._starts[first + 1], 0.0)
         rest = np.maximum(within - to_next - between, 0.0)
-        rise = to_next * (self._slopes[first] + (2.0 * into + to_next) * self._curves[first])
+        rise: Floats = to_next * (self._slopes[first] + (2.0 * into + to_next) * self._curves[first])
         rise += np.where(last > first, self._values[last] - self._values[first + 1], 0.0)
         rise += rest * (self._slopes[last] + rest * self._curves[last])
-        return rise + np.exp(self._index * np.maximum(lower - self._end, 0.0)) * self._tail(beyond)
+        rise += np.exp(self._index * np.maximum(lower - self._end, 0.0)) * self._tail(beyond)
+        return rise
 
 
 def _refuse(name: str, found: object, accepted: str) -> None:

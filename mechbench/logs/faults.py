@@ -74,14 +74,13 @@ def refuse_first_fault(path: Path, column: str, auction: str | None, reason: str
             rows = csv.reader(lines, strict=True)
             header = next(rows)
             asked = [header.index(column)] + ([] if auction is None else [header.index(auction)])
-            for fields in rows:
-                row = rows.line_num
+            for row, fields in enumerate(rows, start=2):
                 if any(map(str.strip, fields)):
                     _check_row(path, row, fields, header, asked)
     except UnicodeDecodeError:
         refuse_encoding(path)
     except csv.Error as error:
-        refuse(path, f"row {rows.line_num}", f"broken quoting ({error})", "comma-separated text")
+        refuse(path, f"row {row + 1}", f"broken quoting ({error})", "comma-separated text")
     refuse(path, f"column {quoted(column)}", reason.splitlines()[0] if reason else "a fault", _ACCEPTED)
 
 
@@ -108,9 +107,7 @@ def _check_row(path: Path, row: int, fields: list[str], header: list[str], asked
     if not text.strip():
         refuse(path, where, "no bid", _ACCEPTED)
     if "" in names:
-        refuse(
-            path, f"row {row}, column {quoted(header[asked[1]])}", "no auction", "a name for every auction"
-        )
+        refuse(path, f"row {row}, column {quoted(header[asked[1]])}", "no auction", "a name for every auction")
     try:
         bid = float(text) if text.isascii() and "_" not in text else math.nan
     except ValueError:

@@ -202,9 +202,7 @@ def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
     }
     values = family(**settings)
     exceedances = round(total * tail_share)
-    return Fit(
-        values, round(total), threshold, exceedances, tail.index, tail.index_error, tail.scale, log.notes
-    )
+    return Fit(values, round(total), threshold, exceedances, tail.index, tail.index_error, tail.scale, log.notes)
 
 
 def _tail_share(bids: int) -> float:

@@ -80,9 +80,7 @@ class Summary:
 
     def _count(self, bids: Floats) -> None:
         """Add bids to the steps: a float's leading bits are its step."""
-        steps: NDArray[np.int64] = np.concatenate(
-            [self._steps, np.right_shift(bids.view(np.int64), _DROPPED_BITS)]
-        )
+        steps: NDArray[np.int64] = np.concatenate([self._steps, np.right_shift(bids.view(np.int64), _DROPPED_BITS)])
         counts: Floats = np.concatenate([self._counts, np.ones(bids.size, dtype=np.int64)])
         sums = np.concatenate([self._sums, bids])
         self._steps, place = np.unique(steps, return_inverse=True)
