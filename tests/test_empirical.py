@@ -208,6 +208,7 @@ def test_arrays_of_any_shape_pass(dimensions: int) -> None:
     for method in (family.survival, family.cumulative, family.density):
         assert method(40 * s).shape == s.shape
     assert family.relative_drop(s[..., None], s).shape == np.broadcast_shapes((*s.shape, 1), s.shape)
+    assert family.relative_drop(s, 1e-9 * s).shape == s.shape
     assert (s == before).all()
 
 
