@@ -14,8 +14,8 @@ __all__ = ["FEWEST", "Draws", "doublings"]
 FEWEST = 2**6
 """The fewest draws that an interval may rest on."""
 
-_BLOCK = 2**17
-"""Numbers drawn at once; the results do not depend on it."""
+_BLOCK = 2**15
+"""Numbers drawn at once, few enough for a cache; the results do not depend on it."""
 _ROWS = 2**12
 """Draws summed at once; a power of two."""
 _BATCHES = 2**10
