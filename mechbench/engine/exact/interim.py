@@ -23,8 +23,7 @@ from numpy.typing import NDArray
 from mechbench.contract import Floats, InterimPrice
 from mechbench.engine.exact.order import OrderLaw, binomial_at_most
 from mechbench.engine.exact.sizes import Sizes
-from mechbench.engine.exact.supply_use import units_unsold
-from mechbench.engine.exact.units import LOOSE, Resolution
+from mechbench.engine.exact.units import LOOSE
 from mechbench.engine.exact.winners import Place
 
 __all__ = ["interim_gain"]
@@ -50,9 +49,7 @@ def interim_gain(sizes: Sizes, price: InterimPrice, error: float) -> tuple[Float
 
 
 def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, float]:
-    unsold, unsold_error = units_unsold(sizes, Resolution())
-    winners = float((sizes.units * (1.0 - unsold))[0] / sizes.bidders[0])
-    slack = float(unsold_error[0] * sizes.units[0] / sizes.bidders[0]) / winners
+    winners = float(_expected_winners(sizes)[0] / sizes.bidders[0])
     goal = 0.1 * error * winners
     loose = error >= LOOSE
     first = 6 if loose else 12
@@ -61,11 +58,21 @@ def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, f
         fine, unsettled = _gained(
             _grid(sizes, price, panels, 12 if loose and panels == 2 * first else 34), sizes, price, goal
         )
-        bound = (abs(fine - coarse) + unsettled + (1e-13 + slack) * fine) / winners
+        bound = (abs(fine - coarse) + unsettled + 1e-13 * fine) / winners
         if bound <= error:
             break
         coarse = fine
     return fine / winners, bound
+
+
+def _expected_winners(sizes: Sizes) -> Floats:
+    """Return the expected number of units sold as a sum of positive terms: up to k bids reach the reserve, or more."""
+    chance, rest = np.array(sizes.chance), np.array(sizes.chance_not)
+    few = sizes.bidders * chance * binomial_at_most(sizes.units - 1, sizes.bidders - 1, chance, rest)
+    # more than k reach it when at most n - k - 1 do not
+    many = binomial_at_most(sizes.bidders - sizes.units - 1, sizes.bidders, rest, chance)
+    winners: Floats = few + sizes.units * many
+    return winners
 
 
 @dataclass(frozen=True)

@@ -16,10 +16,13 @@ import numpy as np
 
 from mechbench.contract import Floats
 
-__all__ = ["EXPONENT", "bound", "cut_off", "decaying", "finite", "nested", "settled", "smooth", "tame"]
+__all__ = ["EXPONENT", "FURTHEST", "bound", "cut_off", "decaying", "finite", "nested", "settled", "smooth", "tame"]
 
 EXPONENT = 34.0
 """Mass below ``exp(-34) = 2e-15`` of the peak is left out."""
+
+FURTHEST = 5.9
+"""Where the tanh-sinh grid ends at the latest: distances from an end then go down to about ``exp(-573)``."""
 
 _EPSILON = float(np.finfo(np.float64).eps)
 
@@ -63,27 +66,30 @@ def tame(lo: Floats, hi: Floats, slow: Floats, nodes: int) -> tuple[Floats, Floa
     return flip[:, None] * y, step * slope
 
 
-def finite(lo: Floats, hi: Floats, nodes: int) -> tuple[Floats, Floats, Floats]:
+def finite(lo: Floats, hi: Floats, nodes: int, growth: float = 0.0) -> tuple[Floats, Floats, Floats]:
     """Tanh-sinh nodes on [lo, hi], for any behaviour at the ends that is integrable.
 
     Parameters
     ----------
     lo, hi : arrays of one shape
     nodes : int
+    growth : float
+        The integrand may grow like the distance from an end to the power ``-growth``, below 1.
 
     Returns
     -------
     from_lo, from_hi, weight : arrays (..., nodes)
         Distances of each node from the two ends, each with all its digits.
     """
-    near, far, weight = _tanh_sinh(nodes)
+    reach = 3.4 if growth <= 0 else min(float(np.arcsinh((EXPONENT + 12.0) / (1.0 - growth) / np.pi)), FURTHEST)
+    near, far, weight = _tanh_sinh(nodes, reach)
     width = (hi - lo)[..., None]
     return width * near, width * far, width * weight
 
 
 @lru_cache(maxsize=32)
-def _tanh_sinh(nodes: int) -> tuple[Floats, Floats, Floats]:
-    grid = np.linspace(-3.4, 3.4, nodes)
+def _tanh_sinh(nodes: int, reach: float) -> tuple[Floats, Floats, Floats]:
+    grid = np.linspace(-reach, reach, nodes)
     odds = np.exp(np.pi * np.sinh(grid))
     near, far = odds / (1.0 + odds), 1.0 / (1.0 + odds)
     return near, far, (grid[1] - grid[0]) * np.pi * np.cosh(grid) * near * far

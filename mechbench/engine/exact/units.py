@@ -24,7 +24,18 @@ import numpy as np
 
 from mechbench.contract import Floats, Functional
 from mechbench.engine.exact.order import binomial_at_most, binomial_between
-from mechbench.engine.exact.rules import EXPONENT, bound, cut_off, decaying, finite, nested, settled, smooth, tame
+from mechbench.engine.exact.rules import (
+    EXPONENT,
+    FURTHEST,
+    bound,
+    cut_off,
+    decaying,
+    finite,
+    nested,
+    settled,
+    smooth,
+    tame,
+)
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.winners import Place, Ranked
 
@@ -32,6 +43,8 @@ __all__ = ["LOOSE", "Contested", "NoRouteError", "Resolution", "SlackDraws", "co
 
 LOOSE = 1e-6
 """Errors asked for from here on are met with fewer nodes and shorter searches."""
+_DEEPEST = 600.0
+"""Log ratio of tail probabilities beyond which nothing is evaluated: they stay above 1e-300."""
 _BLOCK = 1 << 15
 """Quadrature nodes evaluated at once: what a core's cache holds, so that many sizes cost no more each than one."""
 
@@ -275,13 +288,10 @@ def _exponential(
 
     With `deep_first` the far end of the tail is at E = 0 and the function may be singular there.
     """
-    nodes, weight = decaying(resolution.inner)
-    if growth > 0:
-        stretch = 1.0 / (1.0 - growth)
-        nodes, weight = nodes * stretch, weight * (np.exp(-nodes * (stretch - 1.0)) * stretch)[:, None]
+    nodes, weight = _growing(resolution, growth) if growth > 0 else decaying(resolution.inner)
     if not breaks:
         return nodes, weight
-    limit = EXPONENT / (1.0 - growth)
+    limit = min(EXPONENT / (1.0 - growth), _DEEPEST)
     pieces, weights = [], []
     left = np.zeros_like(breaks[0][..., 0])
     for piece, stop in enumerate(breaks):
@@ -298,6 +308,21 @@ def _exponential(
     pieces.append(left[..., None] + nodes)
     weights.append(np.exp(-left)[..., None, None] * weight)
     return np.concatenate(pieces, axis=-1), np.concatenate(weights, axis=-2)
+
+
+def _growing(resolution: Resolution, growth: float) -> tuple[Floats, Floats]:
+    """Nodes and nested weights for the mean over a standard exponential of what grows like ``exp(growth * E)``.
+
+    The rule is stretched to see the whole mass. Where that would leave the floats, it stops at `_DEEPEST` and a
+    last node stands for the power tail beyond, whose mean is its edge's over ``1 - growth``.
+    """
+    stretch = 1.0 / (1.0 - growth)
+    if stretch * EXPONENT < _DEEPEST:
+        nodes, weight = decaying(resolution.inner)
+        return nodes * stretch, weight * (np.exp(-nodes * stretch * growth) * stretch)[:, None]
+    from_zero, _, weight = finite(np.zeros(1), np.full(1, _DEEPEST), resolution.cut)
+    rule = nested(weight[0] * np.exp(-from_zero[0]))
+    return np.append(from_zero[0], _DEEPEST), np.vstack([rule, np.full(3, np.exp(-_DEEPEST) * stretch)])
 
 
 def _fold(amount: Floats, outer: Floats, *inner: Floats) -> Floats:
@@ -404,11 +429,11 @@ class SlackDraws:
         self.start = np.zeros_like(self.end)
         self.stop = np.minimum(self.end, EXPONENT + 6.0)
 
-    def _panels(self, knots_at: list[Floats]) -> Iterator[tuple[Floats, Floats, Floats]]:
+    def _panels(self, knots_at: list[Floats], growth: float = 0.0) -> Iterator[tuple[Floats, Floats, Floats]]:
         """Exponential nodes, their distance to the end and nested weights, panel by panel between knots (cells,)."""
         edges = [self.start, *(np.clip(knot, self.start, self.stop) for knot in knots_at), self.stop]
         for left, right in pairwise(edges):
-            from_left, from_right, weight = finite(left, right, self.resolution.slack)
+            from_left, from_right, weight = finite(left, right, self.resolution.slack, growth)
             at = left[:, None] + from_left
             to_end = (self.end - right)[:, None] + from_right
             yield at, to_end, nested(weight * np.exp(-at))
@@ -433,13 +458,13 @@ class SlackDraws:
             value, error = value + more, error + more_error
         return value, error
 
-    def _lowest_nodes(self) -> Iterator[tuple[Floats, Floats, Floats, Floats]]:
+    def _lowest_nodes(self, growth: float = 0.0) -> Iterator[tuple[Floats, Floats, Floats, Floats]]:
         """(log ratio up to the lowest, chance of another further up, its complement, nested weights)."""
         knots = [
             -self.sizes.bidders * np.log1p(-self.sizes.turnout * (self.sizes.eligible[0] - knot))
             for knot in reversed(self.sizes.knots)
         ]
-        for exponent, to_end, weights in self._panels(knots):
+        for exponent, to_end, weights in self._panels(knots, growth):
             outside = -np.expm1(-exponent / self.n)
             kept = np.exp(-exponent / self.n)
             inside = np.where(
@@ -466,15 +491,18 @@ class SlackDraws:
 
     def sum_of_lowest(self, functional: Functional) -> tuple[Floats, Floats]:
         """Return the number of winners times an amount of the lowest."""
+        growth = max(self.sizes.values.tail_index, 0.0)
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
-        for ratio, more, less, weights in self._lowest_nodes():
+        for ratio, more, less, weights in self._lowest_nodes(growth):
             # contested draws here are those whose k-th bid is at least the reserve: at most k - 1 remain
             first = binomial_at_most(self.k - 2, self.n - 1, more, less)
             rest = (self.n - 1) * more * binomial_at_most(self.k - 3, self.n - 2, more, less)
             amount = functional.amount(Ranked(self.place, self.share, lowest=ratio))
             part, part_error = self._total(amount * (first + rest), weights)
             value, error = value + part, error + part_error
-        return value, error
+        # one winner alone may sit nearer the end than the grid goes
+        unseen = np.exp(-(1.0 - growth) * np.pi * np.sinh(FURTHEST))
+        return value, error + unseen * value
 
     def best_and_lowest(self, functional: Functional) -> tuple[Floats, Floats]:
         """Return an amount of the best and the lowest of at most k - 1 winners; one alone is both."""
