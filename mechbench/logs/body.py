@@ -58,7 +58,7 @@ class Body:
         short = threshold - means - self.below[:, -1] * tail_scale - free.sum(axis=1) * least
         weight = np.sqrt(np.diff(self.cells)) / (means + _WEIGHT_FLOOR * np.median(means))
         drop, last = self.drop[:-1], self.drop[-1]
-        room = threshold - last * tail_scale - drop.sum() * least
+        room = threshold * (1.0 - _MARGIN) - last * tail_scale - drop.sum() * least
         found = nnls(free * weight[:, None], short * weight)[0]
         if found @ drop > room:
             heavy = _HEAVY * weight.max() / drop.max()
@@ -121,5 +121,7 @@ _WEIGHT_FLOOR = 0.1
 """A cell counts by its relative error, but bids below a tenth of the median are not worth more than those."""
 _LEAST_SLOPE = 1e-6
 """Least mean slope as a share of threshold / E_u: Q must rise strictly."""
+_MARGIN = 1e-9
+"""Share of the threshold by which a lower end stays above 0, so that no rounding takes it below."""
 _HEAVY = 1e4
 """Weight of the row that keeps the lower end at 0."""

@@ -184,7 +184,7 @@ def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
     tail_weights[0] = reached[first] - cut
     there = tail_weights > 0
     tail = fit_tail(excesses[there], tail_weights[there])
-    tail = replace(tail, scale=max(tail.scale, _LEAST_SCALE * threshold))
+    tail = replace(tail, scale=min(max(tail.scale, _LEAST_SCALE * threshold), _MOST_SCALE * threshold))
     plan = body_plan(tail_share)
     if tail.scale * math.log(plan.levels[-2] / tail_share) > threshold:
         plan = body_plan(tail_share, threshold / (2.0 * tail.scale))
@@ -228,6 +228,6 @@ _TAIL_BIDS = 3.0
 _ENOUGH_SEEN = 10
 _LEAST_EXCESS = 1e-12
 """Least excess as a share of the threshold, for bids that equal it."""
-_LEAST_SCALE = 1e-6
-"""Least scale of the tail as a share of the threshold, for exceedances that all but equal it."""
+_LEAST_SCALE, _MOST_SCALE = 1e-6, 1e6
+"""Bounds on the scale of the tail as a share of the threshold, for exceedances that all but equal it or dwarf it."""
 _ROUNDING = 1e-12
