@@ -153,6 +153,26 @@ def test_the_body_is_the_mean_of_its_cells() -> None:
         assert ours[cell] == pytest.approx(mean / (end - begin), rel=1e-9)
 
 
+@pytest.mark.parametrize("name", LAWS)
+def test_smooth_laws_fit_their_logs(name: str) -> None:
+    """A log of a smooth law is met to a few hundredths in its upper half, and nothing is said about it."""
+    fit = fit_log(log_of(LAWS[name].upper_quantile(1 - np.random.default_rng(23).random(20_000))))
+    assert fit.misfit < 0.05
+    assert fit.notes == ()
+
+
+def test_a_log_in_two_clusters_is_told_to_be_missed() -> None:
+    """Between two clusters of bids a smooth law cannot be right, and the fit says by how much it is wrong."""
+    rng = np.random.default_rng(24)
+    bids = np.sort(np.concatenate([rng.normal(10, 1, 1000), rng.normal(60, 2, 1000)]))
+    fit = fit_log(log_of(bids))
+    shares = (np.arange(2000) + 0.5) / 2000
+    above = (shares > 0.5) & (bids < fit.threshold)
+    by_bid = np.abs(fit.values.lower_quantile(shares) / bids - 1)[above].max()
+    assert 0.15 < fit.misfit <= by_bid
+    assert any("misses" in note for note in fit.notes)
+
+
 @pytest.mark.parametrize("tick", [0.5, 2.0, 10.0])
 def test_rounded_bids_give_nearly_the_law_of_the_unrounded(tick: float) -> None:
     """Bids rounded to a tick, at the coarsest a third of the mean, give quantiles within a tenth of it."""

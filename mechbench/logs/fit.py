@@ -20,7 +20,7 @@ import numpy as np
 from mechbench import discovery
 from mechbench.contract import Distribution, Floats
 from mechbench.logs.body import body_plan
-from mechbench.logs.tail import fit_tail
+from mechbench.logs.tail import Tail, fit_tail
 
 if TYPE_CHECKING:
     from mechbench.logs.read import BidLog
@@ -47,6 +47,9 @@ class Fit:
         Tail index and its standard error.
     tail_scale : float
         Scale of the tail, in the log's currency.
+    misfit : float
+        How far the smooth law is from the log at most: the largest relative gap between a cell's mean bid in the
+        log and in the law, over the cells between the median and the threshold. Resampling does not see it.
     notes : tuple of str
         What a reader of the numbers should know about the log, in sentences.
     """
@@ -58,6 +61,7 @@ class Fit:
     tail_index: float
     tail_index_error: float
     tail_scale: float
+    misfit: float
     notes: tuple[str, ...]
 
 
@@ -75,7 +79,14 @@ def fit_log(log: BidLog) -> Fit:
     -------
     Fit
     """
-    return _fit(log, log.weights.astype(np.float64), discovery.family_class("empirical"))
+    fit = _fit(log, log.weights.astype(np.float64), discovery.family_class("empirical"))
+    if fit.misfit < _LARGE_MISFIT:
+        return fit
+    note = (
+        f"The smooth law misses the upper half of the log by up to {100 * fit.misfit:.0f} % of a bid (bids in "
+        f"clusters, or a few popular ones): the log's sampling error does not cover that."
+    )
+    return replace(fit, notes=(*fit.notes, note))
 
 
 def resampled_fits(log: BidLog, count: int, rng: np.random.Generator) -> Iterator[Fit]:
@@ -175,16 +186,7 @@ def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
     reached = np.cumsum(weights)
     total = reached[-1]
     tail_share = _tail_share(log.bids)
-    cut = total * (1.0 - tail_share)
-    last = int(np.searchsorted(reached, cut * (1.0 - _ROUNDING)))
-    first = int(np.searchsorted(reached, cut * (1.0 + _ROUNDING), side="right"))
-    threshold = float(log.values[last] + log.values[first]) / 2
-    excesses = np.maximum(log.values[first:] - threshold, _LEAST_EXCESS * threshold)
-    tail_weights = weights[first:].copy()
-    tail_weights[0] = reached[first] - cut
-    there = tail_weights > 0
-    tail = fit_tail(excesses[there], tail_weights[there])
-    tail = replace(tail, scale=min(max(tail.scale, _LEAST_SCALE * threshold), _MOST_SCALE * threshold))
+    threshold, tail = _tail_above(log.values, weights, reached, total * (1.0 - tail_share))
     plan = body_plan(tail_share)
     if tail.scale * math.log(plan.levels[-2] / tail_share) > threshold:
         plan = body_plan(tail_share, threshold / (2.0 * tail.scale))
@@ -200,9 +202,34 @@ def _fit(log: BidLog, weights: Floats, family: type[Distribution]) -> Fit:
         "levels": tuple(plan.levels[:-1].tolist()),
         "reciprocal_hazards": tuple(slopes.tolist()),
     }
-    values = family(**settings)
-    exceedances = round(total * tail_share)
-    return Fit(values, round(total), threshold, exceedances, tail.index, tail.index_error, tail.scale, log.notes)
+    upper = plan.cells[1:] > 0.5  # noqa: PLR2004 - the median
+    smooth = threshold - plan.below @ np.append(slopes, tail.scale)
+    misfit = float(np.abs(smooth / means - 1.0)[upper].max(initial=0.0))
+    return Fit(
+        values=family(**settings),
+        bids=round(total),
+        threshold=threshold,
+        exceedances=round(total * tail_share),
+        tail_index=tail.index,
+        tail_index_error=tail.index_error,
+        tail_scale=tail.scale,
+        misfit=misfit,
+        notes=log.notes,
+    )
+
+
+def _tail_above(values: Floats, weights: Floats, reached: Floats, cut: float) -> tuple[float, Tail]:
+    """Find the threshold below which `cut` bids lie, and fit the tail above it; `reached` are summed weights."""
+    last = int(np.searchsorted(reached, cut * (1.0 - _ROUNDING)))
+    first = int(np.searchsorted(reached, cut * (1.0 + _ROUNDING), side="right"))
+    threshold = float(values[last] + values[first]) / 2
+    excesses = np.maximum(values[first:] - threshold, _LEAST_EXCESS * threshold)
+    tail_weights = weights[first:].copy()
+    tail_weights[0] = reached[first] - cut
+    there = tail_weights > 0
+    tail = fit_tail(excesses[there], tail_weights[there])
+    scale = min(max(tail.scale, _LEAST_SCALE * threshold), _MOST_SCALE * threshold)
+    return threshold, replace(tail, scale=scale)
 
 
 def _tail_share(bids: int) -> float:
@@ -226,6 +253,7 @@ _NORMAL = 1.959964
 """Two-sided 5 % point of the normal law."""
 _TAIL_BIDS = 3.0
 _ENOUGH_SEEN = 10
+_LARGE_MISFIT = 0.15
 _LEAST_EXCESS = 1e-12
 """Least excess as a share of the threshold, for bids that equal it."""
 _LEAST_SCALE, _MOST_SCALE = 1e-6, 1e6
