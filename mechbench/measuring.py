@@ -52,7 +52,7 @@ def cell_records(cell: Cell, progress: Callable[[int], None] | None = None) -> l
     """
     family = discovery.family_class(cell.family)
     if family.from_log:
-        msg = f"family {cell.family!r} is fitted to a bid log; name the log in a market file"
+        msg = f"family {cell.family!r} is fitted to a bid log; accepted here is another, or a market file with a log"
         raise InputError(msg)
     mechanism = discovery.mechanism_class(cell.mechanism)(**cell.mechanism_settings)
     values = family(**cell.family_settings)

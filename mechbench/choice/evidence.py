@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import itertools
+import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from mechbench import discovery
 from mechbench.choice.judge import Candidate, Finding
-from mechbench.contract import Distribution, IdenticalUnits, InputError, Mechanism
+from mechbench.contract import MONEY, Distribution, Floats, IdenticalUnits, InputError, Mechanism
 from mechbench.engine.evaluate import evaluate
 from mechbench.market.file import FamilyChoice, MarketFile, MechanismChoice
 from mechbench.market.market import Market
@@ -31,8 +34,8 @@ SHOWN = (
 )
 """Measures that every choice shows; what the file requires or ranks by comes on top."""
 
-_ERROR = 1e-6
-"""Error asked of the exact engine: two digits more than are shown."""
+_ERROR = 1e-9
+"""Error asked of the exact engine: equal numbers must come out equal."""
 _RESAMPLES = 200
 _SEED = 0
 
@@ -133,8 +136,6 @@ def _from_log(
     left_out: tuple[str, ...],
     progress: Progress,
 ) -> Evidence:
-    import numpy as np  # noqa: PLC0415 - with logs only
-
     from mechbench.choice.resampling import resampled_findings  # noqa: PLC0415 - with logs only
     from mechbench.logs.fit import depends_on_tail, fit_log, resampled_fits  # noqa: PLC0415
     from mechbench.logs.read import read_log  # noqa: PLC0415
@@ -155,7 +156,7 @@ def _from_log(
     for bidders in file.bidders:
         at = _at_size(file, fit.values, rules, measures, bidders)
         markets = [file.market(values, bidders) for values in again]
-        spread = resampled_findings(
+        changes = resampled_findings(
             at.market,
             markets,
             [rule.mechanism for rule in rules],
@@ -164,18 +165,29 @@ def _from_log(
             np.random.default_rng(_SEED),
             lambda done: progress("resampling the log", done),
         )
-        candidates = tuple(
-            Candidate(
-                candidate.rule,
-                {
-                    measure: Finding(finding.estimate, spread[place, measure])
-                    for measure, finding in candidate.findings.items()
-                },
-            )
-            for place, candidate in enumerate(at.candidates)
-        )
-        sizes.append(AtSize(at.market, candidates, depends_on_tail(fit.bids, at.market)))
+        sizes.append(AtSize(at.market, _spread(at.candidates, changes), depends_on_tail(fit.bids, at.market)))
     return Evidence(file, fit.values, rules, tuple(sizes), left_out, log, fit)
+
+
+def _spread(candidates: Sequence[Candidate], changes: Mapping[tuple[int, str], Floats]) -> tuple[Candidate, ...]:
+    """Put beside each number what it becomes on the resampled logs."""
+    return tuple(
+        Candidate(
+            candidate.rule,
+            {
+                measure: Finding(finding.estimate, _moved(measure, finding.value, changes[place, measure]))
+                for measure, finding in candidate.findings.items()
+            },
+        )
+        for place, candidate in enumerate(candidates)
+    )
+
+
+def _moved(measure: str, value: float, change: Floats) -> Floats:
+    """Return the resampled numbers: never negative, and shares never above 1; infinite ones stay so."""
+    if math.isinf(value):
+        return np.where(np.isinf(change), change, math.nan)
+    return np.clip(value + change, 0.0, math.inf if measure in MONEY else 1.0)
 
 
 def _at_size(

@@ -43,10 +43,13 @@ class Finding:
     resampled : array or None
         The same number on each resample of the log; ``None`` where the values come from no log. The same place
         in two findings of one market is the same resample.
+    signed : bool
+        Whether the number is a difference: measures themselves are never negative.
     """
 
     estimate: Estimate
     resampled: Floats | None = field(default=None, repr=False)
+    signed: bool = False
 
     @property
     def value(self) -> float:
@@ -54,11 +57,25 @@ class Finding:
         return self.estimate.value
 
     @property
-    def log_error(self) -> float | None:
-        """95 % half-width that the log leaves, ``inf`` where it leaves none; ``None`` without a log."""
+    def log_range(self) -> tuple[float, float] | None:
+        """95 % interval that the log leaves, its own error apart; ``None`` without a log."""
         if self.resampled is None:
             return None
-        return _half_width(self.value, self.resampled)
+        if self.signed:
+            return _signed_range(self.value, self.resampled)
+        if math.isinf(self.value) and np.all(self.resampled == self.value):
+            return self.value, self.value
+        known = np.where(np.isnan(self.resampled), math.inf, self.resampled)
+        low, high, _ = log_interval(self.value, known)
+        return low, high
+
+    @property
+    def log_error(self) -> float | None:
+        """Half-width of that interval, ``inf`` where the log leaves none."""
+        if self.log_range is None:
+            return None
+        low, high = self.log_range
+        return (high - low) / 2 if high > low else 0.0
 
     @property
     def error(self) -> float:
@@ -163,12 +180,15 @@ def verdict(requirement: Requirement, finding: Finding) -> Verdict:
 
 def interval(finding: Finding) -> tuple[float, float]:
     """Range in which the number lies, as far as its errors and its status say."""
-    value, error, status = finding.value, finding.error, finding.estimate.status
+    value, status = finding.value, finding.estimate.status
     if math.isinf(value) and "infinite" in status and not finding.log_error:
         return value, value
-    if not (math.isfinite(value) and math.isfinite(error)) or "infinite variance" in status:
+    if not (math.isfinite(value) and math.isfinite(finding.estimate.error)) or "infinite variance" in status:
         return -math.inf, math.inf
-    return value - error, math.inf if "lower bound" in status else value + error
+    low, high = finding.log_range or (value, value)
+    own, method = finding.estimate.error, finding.estimate.method
+    low, high = value - _combined(own, value - low, method), value + _combined(own, high - value, method)
+    return low, math.inf if "lower bound" in status else high
 
 
 def difference(first: Finding, second: Finding) -> Finding:
@@ -186,7 +206,7 @@ def difference(first: Finding, second: Finding) -> Finding:
         "exact" if exact else "simulated",
         "; ".join(notes) or "ok",
     )
-    return Finding(estimate, resampled)
+    return Finding(estimate, resampled, signed=True)
 
 
 def equal(first: Finding, second: Finding) -> bool:
@@ -231,9 +251,13 @@ def _combined(own: float, of_log: float, method: str) -> float:
     return math.hypot(own, of_log) if method == "simulated" else own + of_log
 
 
-def _half_width(value: float, resampled: Floats) -> float:
-    if not math.isfinite(value):
-        return 0.0 if np.all(resampled == value) else math.inf
-    with np.errstate(invalid="ignore"):
-        half = log_interval(value, np.nan_to_num(resampled, nan=math.inf))[2]
-    return math.inf if math.isnan(half) else half
+def _signed_range(value: float, resampled: Floats) -> tuple[float, float]:
+    """1.96 root mean square deviations of the resampled differences from the difference, to either side."""
+    if not (math.isfinite(value) and np.isfinite(resampled).all()):
+        return -math.inf, math.inf
+    reach = _NORMAL * math.sqrt(float(np.mean((resampled - value) ** 2)))
+    return value - reach, value + reach
+
+
+_NORMAL = 1.959963984540054
+"""The normal law's quantile for 95 % between both sides."""

@@ -9,9 +9,10 @@ from mechbench.choice.growth import MOST_BIDDERS, Size, size_that_meets
 from mechbench.choice.judge import Candidate, Decision, Finding, Verdict, decide, difference
 from mechbench.choice.sentences import bound_words, finding_words, recommendation
 from mechbench.contract import MONEY, number_words
+from mechbench.logs.fit import depends_on_tail
 from mechbench.market.limits import NOT_MODELLED
 from mechbench.market.words import market_words
-from mechbench.show.figures import change, largest_error, plus_minus
+from mechbench.show.figures import change, largest_error, limits_digits, plus_minus
 from mechbench.show.tables import Style, bullets, heading, table
 
 __all__ = ["report"]
@@ -103,14 +104,14 @@ _HEADERS = {
     "worst_gain": "worst\ngain",
     "mean_gain": "mean\ngain",
     "interim_gain": "interim\ngain",
-    "revenue": "revenue\nif nobody\nshades",
+    "revenue": "revenue\nif\nnobody\nshades",
     "shaded_revenue": "revenue\nif each\nalone\nshades",
 }
 
 
 def _header(evidence: Evidence, measures: list[str]) -> list[str]:
     names = dict(_HEADERS)
-    names["gain_chance"] = f"chance of\na gain\n> {number_words(evidence.file.gain_threshold)}"
+    names["gain_chance"] = f"chance\nof gain\n> {number_words(evidence.file.gain_threshold)}"
     header = ["rule"]
     for measure in measures:
         name = names.get(measure, measure.replace("_", "\n"))
@@ -120,7 +121,8 @@ def _header(evidence: Evidence, measures: list[str]) -> list[str]:
 
 
 def _rule_cell(rule: str) -> str:
-    return rule.replace(" (", "\n(")
+    name, _, settings = rule.partition(" (")
+    return f"{name}\n{settings.removesuffix(')')}" if settings else name
 
 
 def _cell(finding: Finding) -> str:
@@ -140,8 +142,7 @@ def _told_error(finding: Finding) -> str:
     """Return the error that is shown beside a number: none where the number is exact and rests on no log."""
     if finding.log_error is None and finding.estimate.method == "exact":
         return ""
-    error = finding.error
-    return plus_minus(error) if error and error < float("inf") else ""
+    return plus_minus(finding.error) if limits_digits(finding.value, finding.error) else ""
 
 
 def _footnotes(at: AtSize) -> list[str]:
@@ -196,13 +197,25 @@ def _size_words(evidence: Evidence, size: Size) -> str:
     told: dict[str, Callable[[], str]] = {
         "unknown": lambda: "not searched, as this rule has no exact integral for it",
         "nowhere": lambda: f"not at any size up to 10^{len(str(MOST_BIDDERS)) - 1} bidders",
-        "from": lambda: f"from {_count(size.bidders)} bidders on ({_count(units(size.bidders))} units)",
+        "from": lambda: (
+            f"from {_count(size.bidders)} bidders on ({_count(units(size.bidders))} units)"
+            f"{_beyond_log(evidence, size.bidders)}"
+        ),
         "once": lambda: (
             f"not monotone: met at {_count(size.bidders)} bidders ({_count(units(size.bidders))} units), "
             f"missed again at {_count(size.again)}"
         ),
     }
     return told[size.kind]()
+
+
+def _beyond_log(evidence: Evidence, bidders: int) -> str:
+    """Say where so large a crowd lies beyond what the log shows."""
+    if evidence.fit is None:
+        return ""
+    market = evidence.file.market(evidence.values, bidders)
+    beyond = depends_on_tail(evidence.fit.bids, market) is not None
+    return ", resting on the fitted tail beyond the log" if beyond else ", by the fitted law"
 
 
 def _count(number: int) -> str:
@@ -214,11 +227,12 @@ def _log(evidence: Evidence) -> list[str]:
     if log is None or fit is None:
         return []
     currency = f" {evidence.file.currency}" if evidence.file.currency else ""
-    lines = [
+    told = (
         f"{fit.bids:,} bids above 0 in column {log.column}; a generalised Pareto tail above "
         f"{fit.threshold:.4g}{currency} fitted to the {fit.exceedances:,} highest: tail index "
         f"{fit.tail_index:.2f} ± {1.96 * fit.tail_index_error:.2f} (95 %)."
-    ]
+    )
+    lines = [told]
     if log.auction_count:
         lines.append(f"{log.auction_count:,} auctions are told apart and resampled whole.")
     return [*lines, *fit.notes]
@@ -226,14 +240,7 @@ def _log(evidence: Evidence) -> list[str]:
 
 def _limits(evidence: Evidence) -> list[str]:
     topics = ", ".join(limit.topic for limit in NOT_MODELLED)
-    lines = [
-        "On the market file's assumptions: private values, one bidder acting alone, one auction, an honest operator.",
-        "Neither revenue is a forecast or a bound: the one takes every bid as truthful, the other lets each "
-        "winner, alone, pay the least that keeps the unit; a season's bids lie elsewhere.",
-        f"Not modelled: {topics}.",
-        "An auction's rules may fall under competition, procurement, tax, securities or sector law: counsel "
-        "and the regulator's own rule book decide.",
-    ]
+    lines = [_ASSUMED, _REVENUES, f"Not modelled: {topics}.", _LAW]
     if evidence.log is not None:
         lines.append("Bid logs can identify people and firms: only aggregates of this one are shown.")
     return lines

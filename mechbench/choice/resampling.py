@@ -13,7 +13,7 @@ from collections.abc import Callable, Mapping, Sequence
 import numpy as np
 
 from mechbench.contract import MONEY, Floats, Mechanism
-from mechbench.engine.amounts import IF_SOLD, draw_amounts
+from mechbench.engine.amounts import IF_SOLD, Amounts, draw_amounts
 from mechbench.engine.draws import bids_at, depth_of, lowest_uniforms, tiers
 from mechbench.engine.tails import INFINITE, heavy_amounts
 from mechbench.market.market import Market
@@ -26,10 +26,10 @@ _BIDS = 2**17
 """About as many bids are drawn in all, within the bounds on draws."""
 _REPORTS = 48
 """Reports among which the best is sought for interim gains."""
-_REPORT_BIDS = 2**20
-"""At most so many bids are put to a mechanism for its interim gain; where that leaves too few draws, its
-spread is not known."""
-_FEWEST_PILOTS = 32
+_REPORT_BIDS = (2**18, 2**22)
+"""About as many bids are put to a mechanism at once for its interim gain, and never more than that many."""
+_RIVAL_DRAWS = (32, 1024)
+"""Fewest and most draws of the rivals' bids; where the fewest are too many bids, the spread is not known."""
 _TINY = float(np.finfo(np.float64).tiny)
 
 
@@ -62,7 +62,8 @@ def resampled_findings(
     Returns
     -------
     mapping of array (resamples,) by (place of the mechanism, measure)
-        Changes against the law of the log itself; an infinite mean is ``inf``, a spread that is not known nan.
+        Changes against the law of the log itself; ``inf`` where the resample's mean is infinite, nan where the
+        number is not known.
     """
     common = _Common(market, mechanisms, measures, threshold, rng)
     base = common.measured(market)
@@ -70,7 +71,7 @@ def resampled_findings(
     for place, one in enumerate(resampled):
         found = common.measured(one)
         for key, value in found.items():
-            changes[key][place] = value - base[key] if np.isfinite(value) else value
+            changes[key][place] = value - base[key] if np.isfinite([value, base[key]]).all() else value
         if progress is not None:
             progress(1)
     return changes
@@ -106,19 +107,20 @@ class _Common:
                 if heavy.get(measure) == INFINITE:
                     found[place, measure] = np.inf if measure in MONEY else np.nan
                     continue
-                share = 1.0
-                if measure in IF_SOLD:
-                    share = float(np.mean(amounts.sold))
-                elif measure == "efficiency":
-                    share = float(np.mean(amounts.best_welfare))
-                mean = float(np.mean(amounts.of[measure]))
-                if measure == "efficiency":
-                    found[place, measure] = 1.0 - mean / share if share > 0 else np.nan
-                else:
-                    found[place, measure] = mean / share if share > 0 else np.nan
+                found[place, measure] = _measure(amounts, measure)
             if self._interim is not None:
                 found[place, "interim_gain"] = self._interim.gain(market, place)
         return found
+
+
+def _measure(amounts: Amounts, measure: str) -> float:
+    """One measure from the amounts of all draws."""
+    total = float(np.sum(amounts.of[measure]))
+    if measure == "efficiency":
+        best = float(np.sum(amounts.best_welfare))
+        return 1.0 - total / best if best > 0 else np.nan
+    counted = float(np.sum(amounts.sold)) if measure in IF_SOLD else float(len(amounts.sold))
+    return total / counted if counted > 0 else np.nan
 
 
 class _Interim:
@@ -128,8 +130,9 @@ class _Interim:
         self._mechanisms = mechanisms
         width = min(max(depth_of(one, market) for one in mechanisms), market.bidders - 1)
         edges = tiers(market.supply.units, market.bidders - 1, width)
-        draws = min(_DRAWS[1], _REPORT_BIDS // (_REPORTS * (edges[-1] + 1)))
-        self._known = draws >= _FEWEST_PILOTS
+        each = _REPORTS * (edges[-1] + 1)
+        draws = int(np.clip(_REPORT_BIDS[0] // each, *_RIVAL_DRAWS))
+        self._known = draws * each <= _REPORT_BIDS[1]
         if not self._known:
             return
         self._tails = lowest_uniforms(rng.spawn(len(edges)), draws, market.bidders - 1, edges)

@@ -1,14 +1,14 @@
 """Numbers as people read them: only the digits that the largest of their errors leaves.
 
-The last digit shown is the first whose unit is at least a fifth of the error, so that it is off by 5 units at
-most; and never are more than `MOST_DIGITS` shown, however well a number is known.
+The last digit shown stands where the error's first digit does, as in 0.16 ± 0.06; and never are more than
+`MOST_DIGITS` shown, however well a number is known.
 """
 
 from __future__ import annotations
 
 import math
 
-__all__ = ["MOST_DIGITS", "change", "figure", "largest_error", "plus_minus"]
+__all__ = ["MOST_DIGITS", "change", "figure", "largest_error", "limits_digits", "plus_minus"]
 
 MOST_DIGITS = 4
 """Significant digits shown of a number that is known to more."""
@@ -18,7 +18,7 @@ _SMALL, _LARGE = 1e-4, 1e9
 _CERTAIN = 1e-9
 """Error below which a whole number is taken for what it is."""
 _SLACK = 1.0 - 1e-9
-"""Keeps a unit that equals a fifth of the error from being refused for rounding."""
+"""Keeps an error of one digit from being rounded up for its last bits."""
 _LEAST_PLACE = -300
 
 
@@ -69,10 +69,14 @@ def plus_minus(error: float) -> str:
         return "0"
     if not math.isfinite(error):
         return "unknown"
-    place = max(math.floor(math.log10(error)), _LEAST_PLACE)
-    unit = 10.0**place
+    unit = 10.0 ** _first_place(error)
     rounded = math.ceil(error / unit * _SLACK) * unit
     return _written(rounded, math.floor(math.log10(rounded * (1 + 1e-12))))
+
+
+def limits_digits(value: float, error: float) -> bool:
+    """Whether it is the error that ends the digits of a number, and so is worth showing beside it."""
+    return math.isfinite(error) and error >= _CERTAIN and _place(value, error) > _place(value, 0.0)
 
 
 def _place(value: float, error: float) -> int:
@@ -84,7 +88,12 @@ def _place(value: float, error: float) -> int:
         most = -MOST_DIGITS
     if error == 0:
         return most
-    return max(most, math.ceil(math.log10(error / 5.0 * _SLACK)), _LEAST_PLACE)
+    return max(most, _first_place(error))
+
+
+def _first_place(error: float) -> int:
+    """Power of ten of an error's first digit."""
+    return max(math.floor(math.log10(error)), _LEAST_PLACE)
 
 
 def _leading(value: float) -> int:

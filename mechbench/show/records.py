@@ -40,7 +40,7 @@ FIELDS = (
 )
 """The fields of a record, in their order."""
 
-_FORMULA = ("=", "+", "-", "@", "\t", "\r", "\n")
+_FORMULA = ("=", "+", "-", "@")
 """What makes a spreadsheet take a cell for a formula."""
 
 
@@ -116,10 +116,11 @@ def to_csv(rows: Sequence[Row], fields: Sequence[str] = FIELDS) -> str:
 
 
 def harmless(cell: Cell) -> Cell:
-    """Put an apostrophe before a text that a spreadsheet would take for a formula."""
-    if isinstance(cell, str) and cell.startswith(_FORMULA):
-        return "'" + cell
-    return cell
+    """Make a text one line, with an apostrophe before it where a spreadsheet would take it for a formula."""
+    if not isinstance(cell, str):
+        return cell
+    line = " ".join(cell.split())
+    return "'" + line if line.startswith(_FORMULA) else line
 
 
 def _finite(cell: Cell) -> Cell:

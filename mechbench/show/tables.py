@@ -48,7 +48,7 @@ def bullets(lines: Sequence[str], style: Style) -> str:
 
     if style == "markdown":
         return "\n".join(f"- {escaped(line)}" for line in lines)
-    return "\n".join(textwrap.fill(line, WIDTH, subsequent_indent="  ") for line in lines)
+    return "\n".join(textwrap.fill(line, WIDTH, subsequent_indent="  ", break_on_hyphens=False) for line in lines)
 
 
 def escaped(text: str) -> str:
