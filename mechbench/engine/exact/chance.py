@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mechbench.contract import Floats, Functional
-from mechbench.engine.exact.rules import settled
+from mechbench.engine.exact.rules import EXPONENT, settled
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.units import NoRouteError, Resolution, SlackDraws, contested_nodes
 from mechbench.engine.exact.winners import Place, Ranked
@@ -17,6 +17,7 @@ __all__ = ["chance_above"]
 
 _STEPS = 56
 """Bisections to the last digit."""
+_LEFT_OUT = 2.0 * float(np.exp(-EXPONENT))
 _FURTHEST = 640.0
 """Log ratio that stands for "as high as values go"; tail probabilities stay representable."""
 
@@ -39,7 +40,8 @@ def chance_above(sizes: Sizes, functional: Functional, level: float, resolution:
     if sizes.chance < 1.0:
         more, more_error = _slack(sizes, functional, level, resolution)
         value, error = value + more, error + more_error
-    return value, error
+    # a chance may come from draws so rare that the rules leave them out
+    return value, error + _LEFT_OUT
 
 
 def _amount(functional: Functional, place: Place, share: float, ratio: Floats) -> Floats:
@@ -93,7 +95,7 @@ def _contested(sizes: Sizes, functional: Functional, level: float, resolution: R
 def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats | None:
     """Log-odds of the threshold below which no winner, however high, exceeds the level; None if there is none."""
     law = sizes.law(sizes.units + 1.0)
-    low, high = law.reach(0.0)
+    low, high = law.reach_below(0.0, sizes.chance, sizes.chance_not)
 
     def passed(y: Floats) -> NDArray[np.bool_]:
         s, rest, _ = law.at(y[:, None])
@@ -108,7 +110,7 @@ def _first_reach(sizes: Sizes, functional: Functional, level: float) -> Floats |
 def _where_at_knot(sizes: Sizes, functional: Functional, level: float, knot: float) -> Floats:
     """Log-odds of the threshold for which the winner at the family's knot has just the level."""
     law = sizes.law(sizes.units + 1.0)
-    low, high = law.reach(0.0)
+    low, high = law.reach_below(0.0, sizes.chance, sizes.chance_not)
 
     def passed(y: Floats) -> NDArray[np.bool_]:
         s, rest, _ = law.at(y[:, None])

@@ -58,7 +58,8 @@ def _one_size(sizes: Sizes, price: InterimPrice, error: float) -> tuple[float, f
         fine, unsettled = _gained(
             _grid(sizes, price, panels, 12 if loose and panels == 2 * first else 34), sizes, price, goal
         )
-        bound = (abs(fine - coarse) + unsettled + 1e-13 * fine) / winners
+        # halving stops at the goal, so errors well below it are not vouched for
+        bound = (abs(fine - coarse) + max(unsettled, 0.1 * goal) + 1e-13 * fine) / winners
         if bound <= error:
             break
         coarse = fine

@@ -18,6 +18,8 @@ from mechbench.market.market import Market
 __all__ = ["exact"]
 
 _REFINEMENTS = 3
+_UNDERFLOW = 1e-300
+"""A value that a float holds as 0 need not be 0."""
 _INFINITE = "infinite"
 _UNDEFINED = "undefined: an infinite share of an infinite welfare"
 _NEVER = "no sale"
@@ -67,7 +69,7 @@ def exact(
         return None
     allowed = error * np.abs(value) if measure in MONEY else np.full_like(value, error)
     return [
-        _estimate(float(v), float(b), "ok" if b <= a else "not converged")
+        _estimate(float(v), float(b) + _UNDERFLOW, "ok" if b <= a else "not converged")
         for v, b, a in zip(value, bounds, allowed, strict=True)
     ]
 

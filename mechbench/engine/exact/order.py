@@ -25,6 +25,10 @@ from mechbench.engine.exact.rules import EXPONENT
 __all__ = ["OrderLaw", "at_least_one", "binomial_at_most", "binomial_between"]
 
 
+_DEEP = -0.9
+"""``s / mode - 1`` below which the logarithm of ``s / mode`` comes from the log-odds: nothing cancels there."""
+
+
 @dataclass(frozen=True)
 class OrderLaw:
     """The law of ``S_(j)`` among n uniforms, one cell per element.
@@ -75,6 +79,21 @@ class OrderLaw:
         shift = np.log(low / self.rank)
         return shift - left, right
 
+    def reach_below(self, growth: float, chance: float, rest: float) -> tuple[Floats, Floats]:
+        """`reach`, but of what lies below a cut at the tail probability `chance`, however little that is.
+
+        Left of the mode the log-density rises towards the cut at least as steeply as at it, and no slower than
+        it does towards the mode.
+        """
+        lo, hi = self.reach(growth)
+        if rest <= 0:
+            return lo, hi
+        cut = self.log_odds(chance, rest)
+        rise = self.rank - growth - (self.count + 1.0 - growth) * chance
+        further = np.minimum(-lo, 1.2 * EXPONENT / np.maximum(rise, 1e-3))
+        start: Floats = np.where(rise > 0, np.minimum(lo, cut - further), lo)
+        return start, hi
+
     def log_odds(self, s: float, rest: float) -> Floats:
         """Where the tail probability `s`, with ``rest = 1 - s``, lies on the log-odds axis; inf for 1."""
         if rest <= 0:
@@ -98,18 +117,23 @@ class OrderLaw:
         growth = np.expm1(y)
         scale = 1.0 + mode * growth
         other = high / (low + high)
-        s = mode * np.exp(y) / scale  # not 1 + growth: deep in the tail that is 0
+        s = np.minimum(mode * np.exp(y) / scale, 1.0)  # not 1 + growth: deep in the tail that is 0
         rest = other / scale
         both = np.stack([growth * other / scale, -mode * growth / scale])
         beyond = _log1p_beyond_linear(both)
         exponent = low * beyond[0] + high * beyond[1]
+        deep = both[0] < _DEEP
+        if deep.any():
+            # 1 + over would be 0 from y = -37 on, but the tail matters where the amount grows up it
+            apart = low * (y - np.log1p(mode * growth) - both[0]) + high * beyond[1]
+            exponent = np.where(deep, apart, exponent)
         return s, rest, np.exp(exponent + self._log_peak()[:, None])
 
     def _log_peak(self) -> Floats:
         low, high = self.rank, self.above
         total = low + high
         remainders = _stirling_remainder(np.stack([total, low, high]))
-        stirling = remainders[0] - remainders[1] - remainders[2]
+        stirling: Floats = remainders[0] - remainders[1] - remainders[2]
         return 0.5 * np.log(low / total * high / (2.0 * np.pi)) + stirling
 
 

@@ -203,15 +203,16 @@ def bound(sums: Floats, size: Floats) -> Floats:
 
     Notes
     -----
-    The difference of the first two is about the error of the second. The error of the first is smaller by at
-    least the factor by which the second beat the third, for exponential and for algebraic convergence alike; a
-    factor of 10 is kept in hand. The cube catches a difference that is small by accident: under exponential
+    The difference of the first two is about the error of the second. Were there one kind of error, that of the
+    first would be smaller by the factor by which the second beat the third, or more; but where a small part of
+    the integrand is rougher than the rest, the second may already be down to that part. The square root of the
+    factor and 30 in hand cover it. The cube catches a difference that is small by accident: under exponential
     convergence the error of the first is about the fourth power of that of the third.
     """
     fine = np.abs(sums[..., 0] - sums[..., 1])
     coarse = np.abs(sums[..., 1] - sums[..., 2])
     scale = np.where(size > 0, size, 1.0)
-    ratio = np.minimum(1.0, 10.0 * fine / np.maximum(coarse, 1e-300))
+    ratio = np.minimum(1.0, 30.0 * np.sqrt(fine / np.maximum(coarse, 1e-300)))
     accident = scale * np.minimum(1.0, coarse / scale) ** 3
     worst: Floats = np.maximum(fine * ratio, np.minimum(accident, coarse)) + 64.0 * _EPSILON * size
     return worst

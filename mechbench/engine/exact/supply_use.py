@@ -72,9 +72,9 @@ def _beyond_floor(
     """Integrate over the log-odds from the reserve's up to `end`, of (s, rest, density, s - chance)."""
     lo, hi = law.reach(0.0)
     cut = law.log_odds(sizes.chance, sizes.chance_not)
-    # past the bump the log-density falls at least as steeply as at the cut
+    # past the bump the log-density falls at least as steeply as at the cut, and no slower than at the bump
     fall = np.maximum((sizes.bidders + 1.0) * sizes.chance - law.rank, 1e-3)
-    stop = np.minimum(np.maximum(hi, cut + np.where(cut > hi, 40.0 / fall, 0.0)), end)
+    stop = np.minimum(np.where(cut > 0, cut + np.minimum(hi, 40.0 / fall), hi), end)
     middle = np.clip(lo, cut, stop)
     value, error = np.zeros_like(cut), np.zeros_like(cut)
     for left, right in ((cut, middle), (middle, np.maximum(stop, middle))):
@@ -89,4 +89,6 @@ def _beyond_floor(
         amount = integrand(s, rest, density, beyond)
         more, more_error = settled(amount, nested(weight * np.cosh(t)))
         value, error = value + more, error + more_error
-    return value, error
+    with np.errstate(divide="ignore"):
+        # a density of exp(-700) is known to 700 roundings
+        return value, error + 2e-15 * value * np.minimum(np.abs(np.log(value)), 750.0)

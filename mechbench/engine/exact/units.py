@@ -116,7 +116,7 @@ def contested_nodes(
     log-odds (cells,) at which the integrand is not smooth. With either, `knots_below` is not told.
     """
     law = sizes.law(rank)
-    lo, hi = law.reach(growth)
+    lo, hi = law.reach_below(growth, sizes.chance, sizes.chance_not)
     cut = law.log_odds(sizes.chance, sizes.chance_not)
     knots = sizes.knots
     told = start is None and not breaks
@@ -317,8 +317,8 @@ def _growing(resolution: Resolution, growth: float) -> tuple[Floats, Floats]:
     last node stands for the power tail beyond, whose mean is its edge's over ``1 - growth``.
     """
     stretch = 1.0 / (1.0 - growth)
-    if stretch * EXPONENT < _DEEPEST:
-        nodes, weight = decaying(resolution.inner)
+    nodes, weight = decaying(resolution.inner)
+    if stretch * float(nodes[-1]) < _DEEPEST:
         return nodes * stretch, weight * (np.exp(-nodes * stretch * growth) * stretch)[:, None]
     from_zero, _, weight = finite(np.zeros(1), np.full(1, _DEEPEST), resolution.cut)
     rule = nested(weight[0] * np.exp(-from_zero[0]))

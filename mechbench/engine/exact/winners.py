@@ -47,7 +47,8 @@ class Place:
 
     def drop_from(self, log_ratio: Floats) -> Floats:
         """``1 - bid / (bid of up(log_ratio))``."""
-        if not self._near_bottom:
+        if not self._near_bottom or self.values.support[0] > 0:
+            # with a lowest value above 0 two low bids are nearly equal: their ratio has no digits
             return self.values.relative_drop(self.at, log_ratio)
         # From above, the digits lost are those of 1 - s; from below, those of the ratio of the two.
         drop = self.values.relative_drop(self.at, log_ratio)
