@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from mechbench import discovery
+from mechbench.choice import growth
 from mechbench.choice.evidence import SHOWN, gather
 from mechbench.choice.growth import Size, size_that_meets
 from mechbench.choice.judge import Candidate, Finding, decide, difference, verdict
@@ -174,6 +175,7 @@ class TestSentences:
         """A lead in revenue that turns round if each alone shades is told so."""
         said = sentence([rule("a", 0.01, 120, 80), rule("b", 0.0, 100, 100)])
         assert said.startswith("Recommended: a, because of the 2 rules that meet every requirement")
+        assert "20.00 EUR ahead of b" in said or "20 EUR ahead of b" in said
         assert "if each alone shades, b earns more, 100 EUR" in said
 
     def test_tie(self):
@@ -209,6 +211,15 @@ class TestSentences:
         assert said.count("if nobody shades") <= said.count("if each alone shades")
 
 
+def made_up(gains):
+    """Stand in for the engine with gains by the number of bidders."""
+
+    def evaluate_sizes(markets, *_: object, **__: object) -> list[Estimate]:
+        return [Estimate(gains(market.bidders), 0.0, "exact") for market in markets]
+
+    return evaluate_sizes
+
+
 class TestSizes:
     def search(self, name="pay-as-bid", family="uniform", bound=GAIN, units=2, start=10, **settings: object):
         """Search in a market with a fixed number of units."""
@@ -225,6 +236,24 @@ class TestSizes:
         found = self.search(family="exponential", units=1)
         assert found.kind == "from"
         assert 1e8 < found.bidders < 1.2e8
+
+    @pytest.mark.parametrize("least", [11, 12, 20, 21, 37, 1023, 5121, 123_456_789, 10**12])
+    def test_to_the_bidder(self, least, monkeypatch):
+        """The least size that meets a limit is found to one bidder, wherever it lies."""
+        gains = lambda size: 0.04 if size >= least else 0.06  # noqa: E731
+        monkeypatch.setattr(growth, "evaluate_sizes", made_up(gains))
+        assert self.search() == Size("from", least)
+
+    def test_not_monotone(self, monkeypatch):
+        """A limit that is met only for a while is told so, with the size looked at that misses it again."""
+        gains = lambda size: 0.04 if 100 <= size < 1000 else 0.06  # noqa: E731
+        monkeypatch.setattr(growth, "evaluate_sizes", made_up(gains))
+        assert self.search() == Size("once", 100, 1280)
+
+    def test_no_integral(self, monkeypatch):
+        """A rule without exact integrals is not searched."""
+        monkeypatch.setattr(growth, "evaluate_sizes", lambda *_, **__: None)
+        assert self.search() == Size("unknown")
 
     def test_nowhere(self):
         """A Pareto tail keeps the gain at any size, and the search says so."""
@@ -301,6 +330,15 @@ class TestLogs:
             changes = np.array(exact[1:]) - exact[0]
             reach = 0.15 * np.abs(changes).max()
             assert moved[0, measure] == pytest.approx(changes, abs=reach), measure
+
+
+class TestUnseenChances:
+    def test_blur(self, evidence):
+        """A chance that nearly every draw sees come true is known to 3 in the draws, not to the last digit."""
+        payer, uniform = evidence.sizes[0].candidates
+        assert payer.findings["gain_chance"].value > 0.999
+        assert payer.findings["gain_chance"].log_error > 1e-3
+        assert uniform.findings["gain_chance"].log_error == 0
 
 
 class TestReport:

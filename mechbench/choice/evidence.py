@@ -12,6 +12,7 @@ import numpy as np
 
 from mechbench import discovery
 from mechbench.choice.judge import Candidate, Finding
+from mechbench.choice.resampling import resampled_findings, unseen_chance
 from mechbench.contract import MONEY, Distribution, Floats, IdenticalUnits, InputError, Mechanism
 from mechbench.engine.evaluate import evaluate
 from mechbench.market.file import FamilyChoice, MarketFile, MechanismChoice
@@ -136,7 +137,6 @@ def _from_log(
     left_out: tuple[str, ...],
     progress: Progress,
 ) -> Evidence:
-    from mechbench.choice.resampling import resampled_findings  # noqa: PLC0415 - with logs only
     from mechbench.logs.fit import depends_on_tail, fit_log, resampled_fits  # noqa: PLC0415
     from mechbench.logs.read import read_log  # noqa: PLC0415
 
@@ -152,6 +152,7 @@ def _from_log(
     )
     fit = fit_log(log)
     again = [one.values for one in resampled_fits(log, _RESAMPLES, np.random.default_rng(_SEED))]
+    mechanisms = [rule.mechanism for rule in rules]
     sizes = []
     for bidders in file.bidders:
         at = _at_size(file, fit.values, rules, measures, bidders)
@@ -159,28 +160,47 @@ def _from_log(
         changes = resampled_findings(
             at.market,
             markets,
-            [rule.mechanism for rule in rules],
+            mechanisms,
             measures,
             file.gain_threshold,
             np.random.default_rng(_SEED),
             lambda done: progress("resampling the log", done),
         )
-        sizes.append(AtSize(at.market, _spread(at.candidates, changes), depends_on_tail(fit.bids, at.market)))
+        sizes.append(
+            AtSize(
+                at.market,
+                _spread(at.candidates, changes, unseen_chance(at.market, mechanisms)),
+                depends_on_tail(fit.bids, at.market),
+            )
+        )
     return Evidence(file, fit.values, rules, tuple(sizes), left_out, log, fit)
 
 
-def _spread(candidates: Sequence[Candidate], changes: Mapping[tuple[int, str], Floats]) -> tuple[Candidate, ...]:
+def _spread(
+    candidates: Sequence[Candidate], changes: Mapping[tuple[int, str], Floats], unseen: float
+) -> tuple[Candidate, ...]:
     """Put beside each number what it becomes on the resampled logs."""
     return tuple(
         Candidate(
             candidate.rule,
             {
-                measure: Finding(finding.estimate, _moved(measure, finding.value, changes[place, measure]))
+                measure: Finding(
+                    finding.estimate,
+                    _moved(measure, finding.value, changes[place, measure]),
+                    blur=_blur(measure, finding, unseen),
+                )
                 for measure, finding in candidate.findings.items()
             },
         )
         for place, candidate in enumerate(candidates)
     )
+
+
+def _blur(measure: str, finding: Finding, unseen: float) -> float:
+    """How far off the resampled numbers of a chance may be that the draws hardly ever, or nearly always, see."""
+    known = finding.value == 0 and finding.estimate.error == 0
+    rare = min(finding.value, 1.0 - finding.value) < 3.0 * unseen
+    return unseen if measure in {"gain_chance", "no_sale"} and rare and not known else 0.0
 
 
 def _moved(measure: str, value: float, change: Floats) -> Floats:

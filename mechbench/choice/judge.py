@@ -45,11 +45,14 @@ class Finding:
         in two findings of one market is the same resample.
     signed : bool
         Whether the number is a difference: measures themselves are never negative.
+    blur : float
+        How far the resampled numbers themselves may be off, where that matters.
     """
 
     estimate: Estimate
     resampled: Floats | None = field(default=None, repr=False)
     signed: bool = False
+    blur: float = 0.0
 
     @property
     def value(self) -> float:
@@ -62,12 +65,13 @@ class Finding:
         if self.resampled is None:
             return None
         if self.signed:
-            return _signed_range(self.value, self.resampled)
+            low, high = _signed_range(self.value, self.resampled)
+            return low - self.blur, high + self.blur
         if math.isinf(self.value) and np.all(self.resampled == self.value):
             return self.value, self.value
         known = np.where(np.isnan(self.resampled), math.inf, self.resampled)
         low, high, _ = log_interval(self.value, known)
-        return low, high
+        return max(low - self.blur, 0.0), high + self.blur
 
     @property
     def log_error(self) -> float | None:
@@ -206,7 +210,7 @@ def difference(first: Finding, second: Finding) -> Finding:
         "exact" if exact else "simulated",
         "; ".join(notes) or "ok",
     )
-    return Finding(estimate, resampled, signed=True)
+    return Finding(estimate, resampled, signed=True, blur=first.blur + second.blur)
 
 
 def equal(first: Finding, second: Finding) -> bool:

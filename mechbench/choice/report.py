@@ -12,7 +12,7 @@ from mechbench.contract import MONEY, number_words
 from mechbench.logs.fit import depends_on_tail
 from mechbench.market.limits import NOT_MODELLED
 from mechbench.market.words import market_words
-from mechbench.show.figures import change, largest_error, limits_digits, plus_minus
+from mechbench.show.figures import change, figure, largest_error, limits_digits, plus_minus
 from mechbench.show.tables import Style, bullets, heading, table
 
 __all__ = ["report"]
@@ -229,7 +229,7 @@ def _log(evidence: Evidence) -> list[str]:
     currency = f" {evidence.file.currency}" if evidence.file.currency else ""
     told = (
         f"{fit.bids:,} bids above 0 in column {log.column}; a generalised Pareto tail above "
-        f"{fit.threshold:.4g}{currency} fitted to the {fit.exceedances:,} highest: tail index "
+        f"{figure(fit.threshold, 0.0)}{currency} fitted to the {fit.exceedances:,} highest: tail index "
         f"{fit.tail_index:.2f} ± {1.96 * fit.tail_index_error:.2f} (95 %)."
     )
     lines = [told]

@@ -18,7 +18,7 @@ from mechbench.engine.draws import bids_at, depth_of, lowest_uniforms, tiers
 from mechbench.engine.tails import INFINITE, heavy_amounts
 from mechbench.market.market import Market
 
-__all__ = ["resampled_findings"]
+__all__ = ["resampled_findings", "unseen_chance"]
 
 _DRAWS = (64, 2048)
 """Fewest and most draws."""
@@ -77,6 +77,16 @@ def resampled_findings(
     return changes
 
 
+def unseen_chance(market: Market, mechanisms: Sequence[Mechanism]) -> float:
+    """Upper 95 % limit of a chance that none of the draws shows: 3 in their number (the rule of three)."""
+    depth = max(depth_of(mechanism, market) for mechanism in mechanisms)
+    return 3.0 / _draws(tiers(market.supply.units, market.bidders, depth)[-1])
+
+
+def _draws(width: int) -> int:
+    return int(np.clip(_BIDS // width, *_DRAWS))
+
+
 class _Common:
     """Draws of upper-tail probabilities, shared by all laws and all mechanisms."""
 
@@ -92,7 +102,7 @@ class _Common:
         self._measures = [measure for measure in measures if measure != "interim_gain"]
         depth = max(depth_of(mechanism, market) for mechanism in mechanisms)
         edges = tiers(market.supply.units, market.bidders, depth)
-        draws = int(np.clip(_BIDS // edges[-1], *_DRAWS))
+        draws = _draws(edges[-1])
         self._tails = lowest_uniforms(rng.spawn(len(edges)), draws, market.bidders, edges)
         self._interim = _Interim(market, mechanisms, rng) if "interim_gain" in measures else None
 

@@ -66,12 +66,20 @@ def _why(file: MarketFile, candidates: Sequence[Candidate], decision: Decision) 
         return f"it alone {meets} every requirement ({earns})"
     else:
         reason = f"of the {len(decision.followers) + 1} rules that meet every requirement it ranks first by "
-        reason += file.objective
+        reason += f"{file.objective}, {_lead(file, candidates, decision)}"
     if file.objective not in {"revenue", "shaded_revenue"}:
         reason += f", {_amount(file, chosen)}"
     if decision.followers:
         earns += _if_shaded(file, chosen, _second(file, candidates, decision))
     return f"{reason} ({earns})"
+
+
+def _lead(file: MarketFile, candidates: Sequence[Candidate], decision: Decision) -> str:
+    """Tell how far the first is ahead of the second by the objective."""
+    best, second = candidates[decision.leaders[0]], _second(file, candidates, decision)
+    gap = difference(best.findings[file.objective], second.findings[file.objective])
+    told = _money(file, gap) if file.objective in MONEY else finding_words(gap)
+    return f"{told} ahead of {second.rule}"
 
 
 def _if_shaded(file: MarketFile, ahead: Candidate, behind: Candidate) -> str:
