@@ -65,8 +65,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def _parser() -> argparse.ArgumentParser:
     parser = _Parser(
         prog="mechbench",
-        description="Compare auction pricing rules at your market's size: how much a bidder gains by bidding "
-        "below value, what each rule earns, who gets the units, every number with an error bound.",
+        description="Compare auction pricing rules at your market's size: how much a bidder gains by\n"
+        "bidding below value, what each rule earns, who gets the units, with error bounds.",
         epilog="example:\n  mechbench choose\n",
         formatter_class=argparse.RawDescriptionHelpFormatter,
         allow_abbrev=False,

@@ -351,6 +351,17 @@ class TestReport:
             assert said in text
         assert "nan" not in text.replace("nance", "")
 
+    def test_a_rule_without_integrals(self, monkeypatch):
+        """A rule that declares no integrals is simulated, to the error of simulations, and shown with it."""
+        monkeypatch.setattr(discovery.mechanism_class("pay-as-bid"), "functional", lambda *_: None)
+        evidence = gather(read_market(None))
+        simulated = evidence.sizes[0].candidates[0].findings["worst_gain"]
+        assert (simulated.estimate.method, simulated.estimate.seed) == ("simulated", 0)
+        assert abs(simulated.value - 0.48293791) < 2 * simulated.error < 0.01
+        text = report(evidence, "table")
+        assert "half-width of a simulation" in text
+        assert "not searched, as this rule has no exact integral" in text
+
     def test_growth_path(self, tmp_path):
         """A growth path has a block for every size."""
         path = Path(tmp_path, "market.toml")

@@ -35,8 +35,6 @@ SHOWN = (
 )
 """Measures that every choice shows; what the file requires or ranks by comes on top."""
 
-_ERROR = 1e-9
-"""Error asked of the exact engine: equal numbers must come out equal."""
 _RESAMPLES = 200
 _SEED = 0
 
@@ -222,7 +220,7 @@ def _at_size(
 
 def _findings(market: Market, mechanism: Mechanism, measures: Sequence[str], threshold: float) -> Mapping[str, Finding]:
     try:
-        found = evaluate(market, mechanism, measures, error=_ERROR, threshold=threshold)
+        found = evaluate(market, mechanism, measures, threshold=threshold)
     except InputError:
         raise
     except Exception as error:  # a plug-in may raise anything at all
