@@ -113,6 +113,16 @@ def test_difference_of_interim_gains():
     assert apart.value > apart.error
 
 
+def test_a_bid_of_next_to_nothing_beats_absent_rivals():
+    """One rival who turns up half the time, values from 2 on: the best bid of a low value is just above 0."""
+    # A bid b in [2, 3] wins with chance 1/2 + (b - 2)/2, one just above 0 with 1/2. As v <= 3, the best of
+    # (v - b)(b - 1)/2 is at b = (v + 1)/2 < 2 or at 2, at most (v - 2)/2 < v/2: so v/2, a gain of 1/2 a value.
+    market = Market(family_class("uniform")(low=2.0, high=3.0), 2, IdenticalUnits(1), turnout=0.5)
+    found = simulate(market, [PAY_AS_BID], ["interim_gain"], error=0.01, seed=6)
+    estimate = found.estimate(0, "interim_gain")
+    assert abs(estimate.value - 0.5 / 0.75) < 1.5 * estimate.error
+
+
 class PayHalf(Mechanism):
     """The highest bid wins and pays half of it: bidding more than the value pays."""
 

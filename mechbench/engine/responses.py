@@ -45,6 +45,8 @@ _PILOT_BIDS = 2**27
 _FEWEST_PILOT = 32
 _PILOT_BLOCK = 2**16
 _SAME = 1e-9
+_JUST_ABOVE = 1e-9
+"""A report just above 0, as a share of the lowest value that may win."""
 
 
 @dataclass(frozen=True)
@@ -60,11 +62,14 @@ class _Layout:
         The value in the middle of each cell.
     reports : array
         The reports tried, rising; the centres are among them.
+    jumps : array of bool
+        The reports at which the chance to win jumps: the reserve, and just above 0, which beats the absent.
     """
 
     edges: Floats
     centres: Floats
     reports: Floats
+    jumps: NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -150,7 +155,7 @@ class InterimDraws:
         """Report that the pilot found best for a mechanism at each value, array (draws,).
 
         `cell` says in which cell of the layout each value lies. Between the reports tried, the top of the
-        parabola through the best and its neighbours is taken, except at the reserve, where chances jump.
+        parabola through the best and its neighbours is taken, except where the chance to win jumps.
         """
         answer, reports = self._answers[index], self._layout.reports
         utility = value[:, None] * answer.chance - answer.paid
@@ -160,7 +165,7 @@ class InterimDraws:
         fall_left, fall_right = here - utility[row, place - 1], here - utility[row, place + 1]
         left, right = reports[place] - reports[place - 1], reports[place + 1] - reports[place]
         bend = fall_left * right + fall_right * left
-        peak = (fall_left >= 0) & (fall_right >= 0) & (bend > 0) & (reports[place] != self._market.supply.reserve)
+        peak = (fall_left >= 0) & (fall_right >= 0) & (bend > 0) & ~self._layout.jumps[place]
         shift = np.zeros_like(value)
         np.divide(fall_left * right**2 - fall_right * left**2, 2.0 * bend, out=shift, where=peak)
         best = np.where(peak, reports[place] + shift, reports[utility.argmax(axis=1)])
@@ -221,4 +226,6 @@ def _lay_out(market: Market, rng: np.random.Generator) -> _Layout:
     beaten = np.quantile(critical, _LEVELS)
     beaten = beaten[beaten < turnout]
     levels = market.values.upper_quantile(beaten / turnout)
-    return _Layout(edges, centres, np.unique(np.concatenate([centres, levels, [reserve]])))
+    jumps = np.array([reserve, _JUST_ABOVE * centres[centres > 0].min()])
+    reports = np.unique(np.concatenate([centres, levels, jumps]))
+    return _Layout(edges, centres, reports, np.isin(reports, jumps))

@@ -93,9 +93,7 @@ class Simulation:
         for i in range(len(self.mechanisms)):
             for measure in measures:
                 estimate = self.estimate(i, measure)
-                if estimate.status == NO_SALE or estimate.error > slack * self._accepted(
-                    measure, estimate.value
-                ):
+                if estimate.status == NO_SALE or estimate.error > slack * self._accepted(measure, estimate.value):
                     return False
         return True
 
@@ -197,7 +195,7 @@ def _until_known(
     return found
 
 
-def _check(  # noqa: PLR0917  the arguments of `simulate`
+def _check(
     market: Market,
     mechanisms: Sequence[Mechanism],
     measures: Sequence[str],
