@@ -15,7 +15,7 @@ from scipy import stats
 from mechbench.contract import MEASURES, Floats, IdenticalUnits, InputError, Mechanism, Outcome
 from mechbench.discovery import family_class, mechanism_class
 from mechbench.engine import batches
-from mechbench.engine.draws import bids_at, lowest_uniforms, tiers
+from mechbench.engine.draws import _one_minus_exp, bids_at, generators, lowest_uniforms, tiers
 from mechbench.engine.intervals import Ratio, chance_half_width, difference_half_width
 from mechbench.engine.simulate import Simulation, simulate
 from mechbench.market.market import Market
@@ -111,6 +111,26 @@ def test_draws_lose_nothing_in_a_crowd_of_ten_to_the_fifteen():
     for j in range(4):
         assert stats.kstest(drawn[:, j], stats.gamma(j + 1).cdf).pvalue > 1e-3
     assert len(np.unique(drawn[:, 0])) == 20_000
+
+
+def test_the_series_meets_expm1():
+    """One minus the exponential is right to rounding on both sides of where the series is used."""
+    x = -np.sort(np.geomspace(1e-300, 40.0, 30_000))[None, :]
+    for mostly_small in (True, False):
+        found = x.copy()
+        _one_minus_exp(found, mostly_small=mostly_small)
+        np.testing.assert_allclose(found, -np.expm1(x), rtol=1e-15)
+
+
+def test_every_generator_draws_its_own():
+    """Generators of other tiers, purposes, seeds and markets draw other numbers."""
+    market, other = Market(UNIFORM, 9, IdenticalUnits(2)), Market(UNIFORM, 9, IdenticalUnits(2, 0.1))
+    every = [
+        rng
+        for place, seed, purpose in ((market, 1, 0), (market, 1, 1), (market, 2, 0), (other, 1, 0))
+        for rng in generators(place, seed, purpose, 3)
+    ]
+    assert len({rng.random() for rng in every}) == len(every)
 
 
 def test_tiers_join_without_a_seam():
@@ -241,6 +261,7 @@ def test_a_rule_that_overwrites_the_bids_is_stopped():
 COVERED = (
     # measure, bidders, units, reserve, true value, error, mechanism; all uniform, gain threshold 0.7
     ("worst_gain", 20, 3, 0.0, 0.15, 0.01, PAY_AS_BID),
+    ("worst_gain", 2, 1, 0.5, 0.5 - np.log(2) / 3, 0.01, PAY_AS_BID),
     ("efficiency", 2, 1, 0.5, 0.875, 0.01, PAY_AS_BID),
     ("revenue", 2, 1, 0.5, 5 / 12, 0.02, FIRST_REJECTED),
     ("units_unsold", 2, 1, 0.1, 0.01, 0.003, PAY_AS_BID),
@@ -303,6 +324,19 @@ def test_interval_of_a_plain_mean_is_students():
     assert ratio.half_width == pytest.approx(students, rel=1e-9)
     nothing = Ratio(np.zeros(400), np.ones(400), 400.0)
     assert difference_half_width(ratio, nothing) == pytest.approx(students, rel=1e-9)
+
+
+def test_interval_of_a_ratio_is_the_delta_methods():
+    """For a ratio the variance is the textbook one, covariance with the denominator included."""
+    rng = np.random.default_rng(3)
+    under = rng.integers(0, 5, 500).astype(np.float64)
+    top = under * rng.random(500)
+    ratio = Ratio(top, under, float(under.sum()))
+    moments = np.cov(top, under)
+    value = top.mean() / under.mean()
+    variance = (moments[0, 0] - 2 * value * moments[0, 1] + value**2 * moments[1, 1]) / 500 / under.mean() ** 2
+    assert ratio.value == pytest.approx(value, rel=1e-12)
+    assert ratio.half_width == pytest.approx(stats.t(499).ppf(0.975) * np.sqrt(variance), rel=1e-9)
 
 
 def test_never_seen_is_not_without_error():
