@@ -211,8 +211,8 @@ def _grid(sizes: Sizes, price: InterimPrice, panels: int, steps: int) -> _Report
     if cut > lo:
         stop = min(hi, cut)
         edges.append(np.linspace(lo, stop, 1 + panels)[1:])
-        if cut <= hi and sizes.reserve == 0:
-            # the lowest values may fall to 0 like a power at the cut: panels shrink towards it
+        if cut <= hi and sizes.turnout < 1:
+            # at or just beyond the cut the lowest values may fall to 0 like a power: panels shrink towards it
             edges.append(stop - (stop - lo) / panels * 0.5 ** np.arange(1, 25))
     knots = [law.log_odds(sizes.turnout * knot, 1.0 - sizes.turnout * knot) for knot in sizes.knots]
     last = max(float(part[-1]) for part in edges)

@@ -43,6 +43,8 @@ __all__ = ["LOOSE", "Contested", "NoRouteError", "Resolution", "SlackDraws", "co
 
 LOOSE = 1e-6
 """Errors asked for from here on are met with fewer nodes and shorter searches."""
+_PARTS = 3
+"""Pieces of a panel at neither of whose ends the integrand dies off."""
 _DEEPEST = 600.0
 """Log ratio of tail probabilities beyond which nothing is evaluated: they stay above 1e-300."""
 _BLOCK = 1 << 15
@@ -134,31 +136,52 @@ def contested_nodes(
         edges.append(np.clip(law.log_odds(at, 1.0 - at), lo, np.maximum(stop, lo)))
     edges += [np.clip(place, lo, np.maximum(stop, lo)) for place in breaks]
     edges = [*np.sort(np.stack(edges), axis=0), np.maximum(stop, lo)]
-    last = len(edges) - 2
     for panel, (left, right) in enumerate(pairwise(edges)):
         if (right <= left).all():
             continue
-        # y = sinh t shortens the long exponential tails; the distance to the cut keeps its digits
-        begin, end = np.arcsinh(left), np.arcsinh(right)
-        if 0 < panel < last:
-            from_lo, from_hi, weights = smooth(begin, end, resolution.smooth)
-        elif panel == last and start is None:
-            from_hi, weight = cut_off(begin, end, law.width, resolution.cut)
-            from_lo, weights = (end - begin)[:, None] - from_hi, nested(weight)
-        else:
-            from_lo, from_hi, weight = finite(begin, end, resolution.cut)
-            weights = nested(weight)
-        t = np.where(from_lo < from_hi, begin[:, None] + from_lo, end[:, None] - from_hi)
-        s, rest, density = law.at(np.sinh(t))
-        density = density * np.cosh(t) * (right > left)[:, None]
-        to_floor = None
-        if sizes.chance_not > 0 and panel == last:
-            to_end = 2.0 * np.cosh(end[:, None] - 0.5 * from_hi) * np.sinh(0.5 * from_hi)
-            to_cut = np.minimum((cut - right)[:, None] + to_end, 700.0)
-            to_floor = sizes.chance * rest * -np.expm1(-to_cut)
-        yield Contested(
-            sizes.place(s, rest, to_floor), weights * density[..., None], tuple(knots[:panel]) if told else ()
-        )
+        dies_left = start is None and bool((left <= lo).all())
+        dies_right = bool((right >= hi).all())
+        parts = _PARTS if panel == len(edges) - 2 or len(edges) <= _PARTS + 1 else 1
+        # y = sinh t shortens the long exponential tails; the distance to the right end keeps its digits
+        end = np.arcsinh(right)
+        for from_hi, weights in _panel_rules(
+            np.arcsinh(left), end, law.width, resolution, dies=(dies_left, dies_right), parts=parts
+        ):
+            t = end[:, None] - from_hi
+            s, rest, density = law.at(np.sinh(t))
+            density = density * np.cosh(t) * (right > left)[:, None]
+            to_floor = None
+            if sizes.chance_not > 0 and panel == len(edges) - 2:
+                to_end = 2.0 * np.cosh(end[:, None] - 0.5 * from_hi) * np.sinh(0.5 * from_hi)
+                to_cut = np.minimum((cut - right)[:, None] + to_end, 700.0)
+                to_floor = sizes.chance * rest * -np.expm1(-to_cut)
+            place = sizes.place(s, rest, to_floor)
+            yield Contested(place, weights * density[..., None], tuple(knots[:panel]) if told else ())
+
+
+def _panel_rules(
+    begin: Floats, end: Floats, width: Floats, resolution: Resolution, *, dies: tuple[bool, bool], parts: int
+) -> Iterator[tuple[Floats, Floats]]:
+    """Distances of nodes below the end of one panel, with nested weights, for how the integrand goes at its ends.
+
+    Where it dies off at neither, the panel is cut in parts, the last of which may end in any way.
+    """
+    if dies[0]:
+        from_end, weight = cut_off(begin, end, width, resolution.cut)
+        yield from_end, nested(weight)
+    elif dies[1]:
+        from_begin, weight = cut_off(begin, end, width, resolution.cut)
+        yield (end - begin)[:, None] - from_begin, nested(weight)
+    else:
+        step = (end - begin) / parts
+        for part in range(1, max(parts, 2)):
+            left = begin + (part - 1) * step
+            _, from_end, weights = smooth(left, left + step, resolution.smooth)
+            yield from_end + (end - left - step)[:, None], weights
+        if parts > 1:
+            # perhaps the cut, where bids may fall to 0 like a power
+            _, from_end, weight = finite(end - step, end, resolution.cut)
+            yield from_end, nested(weight)
 
 
 def expectation(sizes: Sizes, functional: Functional, resolution: Resolution) -> tuple[Floats, Floats]:
