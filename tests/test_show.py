@@ -90,7 +90,15 @@ class TestFigures:
 
     @pytest.mark.parametrize(
         ("error", "shown"),
-        [(0.0, "0"), (0.0041, "0.005"), (0.004, "0.004"), (0.96, "1"), (33.0, "40"), (math.inf, "unknown")],
+        [
+            (0.0, "0"),
+            (0.0041, "0.005"),
+            (0.004, "0.004"),
+            (0.96, "1"),
+            (33.0, "40"),
+            (math.inf, "unknown"),
+            (7e-14, "< 1e-9"),
+        ],
     )
     def test_errors_round_up(self, error, shown):
         """An error has one digit and is never made smaller."""

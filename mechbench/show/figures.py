@@ -64,9 +64,11 @@ def change(value: float, error: float) -> str:
 
 
 def plus_minus(error: float) -> str:
-    """Write an error itself, to one digit and never too small."""
+    """Write an error itself, to one digit and never too small; the smallest, which are rounding, as a bound."""
     if error == 0:
         return "0"
+    if error < _CERTAIN:
+        return f"< {_CERTAIN:.0e}".replace("e-0", "e-")
     if not math.isfinite(error):
         return "unknown"
     unit = 10.0 ** _first_place(error)
