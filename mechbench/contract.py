@@ -189,7 +189,7 @@ class Distribution(ABC):
         )
         self.prepare()
 
-    def prepare(self) -> None:
+    def prepare(self) -> None:  # noqa: B027 - most families have nothing to prepare
         """Turn the checked settings into attributes; refuse combinations that no single domain can."""
 
     def number(self, name: str) -> float:
@@ -538,9 +538,9 @@ class Mechanism(ABC):
         return None
 
     def least_payments(self, bids: Floats, supply: IdenticalUnits) -> Floats | None:  # noqa: ARG002
-        """The least total each winner could pay and keep at least its allocation, array (draws, bidders)."""
+        """Return the least total each winner could pay and keep its allocation, array (draws, bidders)."""
         return None
 
     def functional(self, measure: str, supply: IdenticalUnits) -> Functional | InterimPrice | float | None:  # noqa: ARG002
-        """What the exact engine integrates for `measure`; a plain float is the value itself, known exactly."""
+        """Return what the exact engine integrates for `measure`; a plain float is the value itself, known exactly."""
         return None

@@ -14,7 +14,7 @@ from typing import TypeVar
 
 from mechbench.contract import Distribution, InputError, Mechanism
 
-__all__ = ["broken", "families", "family_class", "mechanism_class", "mechanisms"]
+__all__ = ["families", "family_class", "mechanism_class", "mechanisms"]
 
 _P = TypeVar("_P", Distribution, Mechanism)
 
@@ -49,18 +49,6 @@ def mechanism_class(name: str) -> type[Mechanism]:
         If there is no such mechanism, or its file cannot be imported.
     """
     return _load(name, "mechanisms", "mechanism", Mechanism)  # type: ignore[type-abstract]
-
-
-def broken() -> dict[str, str]:
-    """Plug-ins that cannot be loaded: the name, and the one-line reason."""
-    faults = {}
-    for load, names in ((family_class, families()), (mechanism_class, mechanisms())):
-        for name in names:
-            try:
-                load(name)
-            except InputError as error:
-                faults[name] = str(error)
-    return faults
 
 
 def _folder(room: str) -> Path:

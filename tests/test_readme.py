@@ -12,15 +12,15 @@ import pytest
 
 ROOT = Path(__file__).resolve().parent.parent
 README = (ROOT / "README.md").read_text(encoding="utf-8")
-FILES = re.findall(r"^`([\w.]+)`:\n\n```(?:toml|python)\n(.*?)^```$", README, flags=re.S | re.M)
-BLOCKS = re.findall(r"^```console\n(.*?)^```$", README, flags=re.S | re.M)
+FILES = re.findall(r"^`([\w.]+)`:\n\n```(?:toml|python)\n(.*?)^```$", README, flags=re.DOTALL | re.MULTILINE)
+BLOCKS = re.findall(r"^```console\n(.*?)^```$", README, flags=re.DOTALL | re.MULTILINE)
 
 
 def _steps() -> list[tuple[str, str]]:
     """Commands and what the README says they print, in order."""
     steps = []
     for block in BLOCKS:
-        for part in re.split(r"^\$ ", block, flags=re.M)[1:]:
+        for part in re.split(r"^\$ ", block, flags=re.MULTILINE)[1:]:
             command, _, output = part.partition("\n")
             steps.append((command, output))
     return steps
@@ -57,7 +57,7 @@ def test_output_block(command, output, folder):
 
 def test_the_two_commands():
     """The README opens with the two set-up commands, and the gate runs the second word for word."""
-    commands = re.findall(r"^ {4}(python3 -m venv .*)$", README, flags=re.M)
+    commands = re.findall(r"^ {4}(python3 -m venv .*)$", README, flags=re.MULTILINE)
     assert len(commands) == 2
     assert commands[0].endswith(".venv/bin/mechbench choose")
     assert commands[1] in (ROOT / ".ci" / "run").read_text(encoding="utf-8")
