@@ -8,6 +8,7 @@ from scipy import integrate, special
 
 from mechbench.contract import Floats, IdenticalUnits, Mechanism, Outcome
 from mechbench.discovery import family_class, mechanism_class
+from mechbench.engine import responses
 from mechbench.engine.responses import InterimDraws
 from mechbench.engine.simulate import simulate
 from mechbench.market.market import Market
@@ -51,6 +52,20 @@ def test_choosing_loses_less_than_the_error(bidders, units, reserve, error):
         chosen, best = _loss(market, PAY_AS_BID, error, seed)
         assert chosen < best + 1e-6
         assert best - chosen < error / 4
+
+
+def test_pilot_and_estimate_draw_apart(monkeypatch):
+    """The pilot, the rivals, the values and the layout come from generators of different purposes."""
+    purposes = []
+    generators = responses.generators
+
+    def watched(market, seed, purpose, count) -> list[np.random.Generator]:
+        purposes.append(purpose)
+        return generators(market, seed, purpose, count)
+
+    monkeypatch.setattr(responses, "generators", watched)
+    InterimDraws(Market(UNIFORM, 5, IdenticalUnits(1)), [PAY_AS_BID], 1, 0.05)
+    assert len(set(purposes)) == len(purposes) == 4
 
 
 def test_last_accepted_price_against_integration():

@@ -5,7 +5,12 @@ from the scatter over the batches of ``X - R D`` (the delta method) and Student'
 batches that scatter says too little, and nothing at all where X never showed; the half-width then grows by
 the terms that Wilson's score interval [1]_ adds for a proportion, at the scale of the X seen. A share is
 therefore never reported without error for having come out 0 in finitely many draws. Chances use Wilson's
-interval itself. The half-width is the distance from the estimate to the farther end.
+interval itself.
+
+The half-width is the distance from the estimate to the farther end of the interval while five events or fewer
+were seen. That end is on one side only, and to claim it on both covers too much (97 % at 60 events), so the
+shift of the interval's centre fades beyond, as 5 over the events seen. A chance is then covered at least 94.2 %
+of the time everywhere, and at most 96.8 % from 20 events on (computed in tests/test_simulate.py).
 
 .. [1] E. B. Wilson, "Probable inference, the law of succession, and statistical inference", *Journal of the
    American Statistical Association* 22 (1927), 209-212.
@@ -25,6 +30,8 @@ __all__ = ["Ratio", "chance_half_width", "difference_half_width"]
 
 _Z = 1.959963984540054
 """The 97.5 % point of the normal law."""
+_FEW = 5.0
+"""Events up to which the shift of Wilson's interval counts in full."""
 _SAME = 1e-12
 """Relative scatter below which batches count as all the same."""
 _ROUNDING = float(np.finfo(np.float64).eps)
@@ -77,9 +84,9 @@ class Ratio:
 
 
 def chance_half_width(hits: float, count: float) -> float:
-    """Half-width for a chance of which `hits` of `count` independent draws tell (Wilson's interval)."""
+    """Half-width for a chance of which `hits` of `count` independent draws tell, after Wilson."""
     chance = hits / count
-    shift = 0.5 * _Z**2 * abs(1.0 - 2.0 * chance)
+    shift = 0.5 * _Z**2 * abs(1.0 - 2.0 * chance) * _fading(min(hits, count - hits))
     spread = _Z * math.sqrt(count * chance * (1.0 - chance) + 0.25 * _Z**2)
     return (shift + spread) / (count + _Z**2)
 
@@ -106,4 +113,8 @@ def _half_width(residual: Floats, top: Floats, count: float, bound: float) -> fl
     scale = math.sqrt(float((top**2).sum()) / seen)
     quantile = float(stdtrit(batches - 1, 0.975))
     spread = math.sqrt(quantile**2 * scatter + rare * (0.5 * _Z**2 * scale) ** 2)
-    return 0.5 * rare * _Z**2 * scale + spread + _ROUNDING * bound
+    return 0.5 * rare * _fading(seen) * _Z**2 * scale + spread + _ROUNDING * bound
+
+
+def _fading(events: float) -> float:
+    return min(1.0, _FEW / max(events, 1.0))
