@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from mechbench.contract import Distribution, Floats
 from mechbench.engine.exact.order import OrderLaw, at_least_one
+from mechbench.engine.exact.rules import EXPONENT
 from mechbench.engine.exact.winners import Place
 from mechbench.market.market import Market
 
@@ -78,6 +79,21 @@ class Sizes:
     def knots(self) -> list[float]:
         """Tail probabilities of the family's knots above the reserve, rising."""
         return sorted(knot for knot in self.values.knots if knot < self.eligible[0])
+
+    @cached_property
+    def growth(self) -> float:
+        """Power of 1/s as which the bids grow up the tail, as far as their mean reaches: at least the tail index.
+
+        A lognormal law of large sigma has index 0, yet its mean may come from tail probabilities of 1e-50: the
+        power is the one whose mean reaches as far.
+        """
+        index = max(self.values.tail_index, 0.0)
+        if np.isfinite(self.values.support[1]) or index > 0:
+            return index
+        depth = np.concatenate([[0.0], np.geomspace(0.5, 690.0, 60)])
+        mass = np.log(np.maximum(self.values.upper_quantile(np.exp(-depth)), 1e-300)) - depth
+        reached = depth[np.flatnonzero(mass > mass.max() - EXPONENT)[-1]]
+        return max(0.0, 1.0 - EXPONENT / float(reached))
 
     @cached_property
     def sale(self) -> Floats:

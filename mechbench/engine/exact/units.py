@@ -209,7 +209,7 @@ def expectation(sizes: Sizes, functional: Functional, resolution: Resolution) ->
 def _contested(sizes: Sizes, functional: Functional, resolution: Resolution) -> tuple[Floats, Floats]:
     uses, units = functional.uses, sizes.units
     rank = units + 1.0 if "threshold" in uses or "lowest" not in uses else units
-    growth = max(sizes.values.tail_index, 0.0) if functional.over == "sum" else 0.0
+    growth = sizes.growth if functional.over == "sum" else 0.0
     value, error = np.zeros_like(units), np.zeros_like(units)
     for nodes in contested_nodes(sizes, rank, growth, resolution):
         outer = nodes.place.at.shape[1]
@@ -254,7 +254,7 @@ def _inner(sizes: Sizes, functional: Functional, nodes: Contested, resolution: R
         amount = functional.amount(Ranked(place, 1.0, winner=ratio)) * (units > 1.0)
         return _fold(amount, nodes.weights, weights)
     if over in {"mean", "sum"} and uses <= {"threshold", "winner"} and "winner" in uses:
-        growth = max(sizes.values.tail_index, 0.0) if over == "sum" else 0.0
+        growth = sizes.growth if over == "sum" else 0.0
         ratio, weights = _typical(nodes, np.ones((1, 1, 1)), resolution, growth)
         amount = functional.amount(Ranked(place, 1.0, winner=ratio))
         return _fold(amount * units if over == "sum" else amount, nodes.weights, weights)
@@ -410,7 +410,7 @@ def _slack(sizes: Sizes, functional: Functional, resolution: Resolution) -> tupl
         price = functional.amount(Ranked(floor, share))
         return sold * price, 1e-14 * sold * price
     if over in {"mean", "sum"} and uses <= {"threshold", "winner"} and "winner" in uses:
-        growth = max(sizes.values.tail_index, 0.0) if over == "sum" else 0.0
+        growth = sizes.growth if over == "sum" else 0.0
         knots = [np.array([[np.log(floor.at[0] / knot)]]) for knot in sizes.knots[::-1]]
         ratio, weights = _exponential(knots, resolution, growth)
         one = functional.amount(Ranked(floor, share, winner=ratio.ravel())) @ weights.reshape(-1, 3)
@@ -498,7 +498,7 @@ class SlackDraws:
             ratio = np.where(
                 outside < 0.5 * self.chance,
                 -np.log1p(-np.minimum(outside / self.chance, 0.5)),
-                np.log(self.chance / inside),
+                np.log(self.chance / np.maximum(inside, 1e-300)),
             )
             yield ratio, inside / kept, self.rest / kept, weights
 
@@ -514,7 +514,7 @@ class SlackDraws:
 
     def sum_of_lowest(self, functional: Functional) -> tuple[Floats, Floats]:
         """Return the number of winners times an amount of the lowest."""
-        growth = max(self.sizes.values.tail_index, 0.0)
+        growth = self.sizes.growth
         value, error = np.zeros_like(self.stop), np.zeros_like(self.stop)
         for ratio, more, less, weights in self._lowest_nodes(growth):
             # contested draws here are those whose k-th bid is at least the reserve: at most k - 1 remain
