@@ -47,6 +47,8 @@ class TestFigures:
             (math.inf, math.inf, "infinite"),
             (math.nan, math.nan, "no number"),
             (3.0, math.inf, "not known"),
+            (1e-14, 1e-11, "0.0000"),
+            (3e-64, 2e-63, "0.0000"),
         ],
     )
     def test_digits(self, value, error, shown):
@@ -103,6 +105,20 @@ class TestFigures:
     def test_errors_round_up(self, error, shown):
         """An error has one digit and is never made smaller."""
         assert plus_minus(error) == shown
+
+    @pytest.mark.parametrize(
+        ("value", "error", "shown"),
+        [
+            (0.4829, 7e-14, "< 1e-9"),
+            (1.059e-10, 3e-14, "3e-14"),
+            (0.0, 7e-14, "< 1e-9"),
+            (math.nan, 7e-14, "< 1e-9"),
+            (570.2, 1e-7, "1e-7"),
+        ],
+    )
+    def test_errors_below_the_digits(self, value, error, shown):
+        """The bound for rounding gives way to the error where the digits beside it are finer than the bound."""
+        assert plus_minus(error, value) == shown
 
     def test_errors_beside_numbers(self):
         """An error is worth showing only where it ends the digits."""

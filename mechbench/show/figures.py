@@ -63,11 +63,15 @@ def change(value: float, error: float) -> str:
     return ("+" if value > 0 else "-") + told
 
 
-def plus_minus(error: float) -> str:
-    """Write an error itself, to one digit and never too small; the smallest, which are rounding, as a bound."""
+def plus_minus(error: float, value: float = 0.0) -> str:
+    """Write an error itself, to one digit and never too small.
+
+    The smallest, which are rounding, are written as a bound, unless the bound would deny digits of the value
+    that are right.
+    """
     if error == 0:
         return "0"
-    if error < _CERTAIN:
+    if error < _CERTAIN and (value == 0 or math.isnan(value) or 10.0 ** _place(value, error) > _CERTAIN):
         return f"< {_CERTAIN:.0e}".replace("e-0", "e-")
     if not math.isfinite(error):
         return "unknown"
@@ -118,4 +122,6 @@ def _written(value: float, place: int) -> str:
     if place >= 0:
         rounded = round(value / 10.0**place) * 10**place
         return f"{rounded:,}"
-    return f"{round(value, -place) + 0.0:,.{-place}f}"
+    rounded = round(value, -place) + 0.0
+    places = -place if rounded else min(-place, MOST_DIGITS)  # a row of zeros tells no more than four of them
+    return f"{rounded:,.{places}f}"
