@@ -7,6 +7,7 @@ written whole, once, when all of it is known.
 from __future__ import annotations
 
 import argparse
+import contextlib
 import os
 import sys
 from collections.abc import Callable, Sequence
@@ -40,7 +41,8 @@ class _Parser(argparse.ArgumentParser):
 
     def error(self, message: str) -> NoReturn:
         """Raise the mistake in place of printing a usage."""
-        line = f"{self.prog}: {message}; accepted is what `{self.prog} --help` shows"
+        hint = "" if "accepted is" in message else f"; accepted is what `{self.prog} --help` shows"
+        line = f"{self.prog}: {message}{hint}"
         raise InputError(line)
 
 
@@ -227,12 +229,12 @@ class _Bars:
 
     def advance(self, what: str, done: int) -> None:
         """Add to what was done."""
-        if sys.stderr.isatty():
+        if _watched():
             self._bar(what).update(done)
 
     def reach(self, what: str, done: int) -> None:
         """Say how much was done so far."""
-        if sys.stderr.isatty():
+        if _watched():
             bar = self._bar(what)
             bar.update(max(0, done - bar.n))
 
@@ -242,6 +244,10 @@ class _Bars:
 
             self._bars[what] = tqdm(desc=what, unit="", unit_scale=True, delay=1.0, leave=False)
         return self._bars[what]
+
+
+def _watched() -> bool:
+    return sys.stderr is not None and sys.stderr.isatty()
 
 
 def _setting(text: str) -> tuple[str, float | str]:
@@ -301,6 +307,8 @@ def _number(text: str) -> float:
 
 def _print(text: str) -> int:
     """Write the output, all of it; a reader that has seen enough is no error."""
+    if sys.stdout is None:  # closed by who started this
+        return _refuse("the output cannot be written: it is closed")
     encoding = getattr(sys.stdout, "encoding", None) or "utf-8"
     try:
         sys.stdout.write(text.encode(encoding, "replace").decode(encoding))
@@ -321,6 +329,8 @@ def _silence() -> None:
 def _refuse(message: str, code: int = _WRONG_INPUT) -> int:
     line = " ".join(message.split())
     name = "" if line.startswith("mechbench") else "mechbench: "
-    encoding = getattr(sys.stderr, "encoding", None) or "utf-8"
-    sys.stderr.write(f"{name}{line}\n".encode(encoding, "backslashreplace").decode(encoding))
+    if sys.stderr is not None:  # else closed by who started this: the exit code has to do
+        encoding = getattr(sys.stderr, "encoding", None) or "utf-8"
+        with contextlib.suppress(OSError):
+            sys.stderr.write(f"{name}{line}\n".encode(encoding, "backslashreplace").decode(encoding))
     return code

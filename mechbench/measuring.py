@@ -50,6 +50,9 @@ def cell_records(cell: Cell, progress: Callable[[int], None] | None = None) -> l
     InputError
         If a name or a number is not accepted, or a plug-in fails in this market.
     """
+    if cell.error is not None and cell.error >= 1:
+        msg = f"error: found {cell.error}; accepted is a number above 0 and below 1"
+        raise InputError(msg)
     family = discovery.family_class(cell.family)
     if family.from_log:
         msg = f"family {cell.family!r} is fitted to a bid log; accepted here is another, or a market file with a log"
@@ -88,7 +91,7 @@ def cell_table(rows: Sequence[Row], style: Style) -> str:
         [
             str(row["measure"]),
             figure(_real(row["value"]), largest_error(_real(row["error"])), str(row["status"])),
-            plus_minus(_real(row["error"])),
+            plus_minus(_real(row["error"]), _real(row["value"])),
             str(row["method"]),
             str(row["status"]),
         ]
