@@ -148,6 +148,12 @@ class TestDecisions:
         found = decide([rule("maybe", number(0.05, 0.01)), rule("no", 0.5)], [GAIN], "revenue")
         assert (found.leaders, found.unsure, found.nearest) == ((), (0,), None)
 
+    @pytest.mark.parametrize("unit", [1e-12, 1e-6, 1.0, 1e12])
+    def test_any_unit_of_money(self, unit):
+        """What is ranked first does not hang on the unit in which money is counted."""
+        rules = [rule("low", 0.01, 100 * unit), rule("high", 0.02, 120 * unit)]
+        assert decide(rules, [GAIN], "revenue").leaders == (1,)
+
     def test_infinite_revenue(self):
         """An infinite expectation is no number, so it outranks nothing."""
         endless = number(math.inf, math.inf, "infinite")
@@ -189,6 +195,14 @@ class TestSentences:
         said = sentence([rule("a"), rule("b", 0.02)], objective="shaded_revenue")
         assert "a and b come out equal by shaded_revenue, 90 EUR" in said
         assert "a has the smaller worst_gain" in said
+
+    def test_infinite(self):
+        """An infinite mean is named as the reason why rules cannot be ranked, not as an amount within its error."""
+        endless = number(math.inf, math.inf, "infinite")
+        said = sentence([rule("finite"), rule("endless", revenue=endless)])
+        assert "finite and endless cannot be ranked by revenue, whose mean is infinite under endless" in said
+        assert "endless earns an infinite mean if nobody shades, 90 EUR if each alone shades" in said
+        assert "within its error" not in said
 
     def test_none(self):
         """Where no rule meets the requirements, the nearest is named with what it misses."""
@@ -254,6 +268,11 @@ class TestSizes:
         """A rule without exact integrals is not searched."""
         monkeypatch.setattr(growth, "evaluate_sizes", lambda *_, **__: None)
         assert self.search() == Size("unknown")
+
+    @pytest.mark.parametrize("start", [10**12, 10**15])
+    def test_as_large_as_the_search_goes(self, start):
+        """A market beyond the largest size searched is told so; it is no failure."""
+        assert self.search(start=start) == Size("unsearched")
 
     def test_nowhere(self):
         """A Pareto tail keeps the gain at any size, and the search says so."""
@@ -361,6 +380,22 @@ class TestReport:
         text = report(evidence, "table")
         assert "half-width of a simulation" in text
         assert "not searched, as this rule has no exact integral" in text
+
+    def test_infinite(self, tmp_path):
+        """A change from an infinite revenue is told in words, and so is a market too large to search."""
+        path = Path(tmp_path, "market.toml")
+        path.write_text(
+            f'[bidders]\ncount = {10**15}\n[values]\nfamily = "pareto"\ntail_index = 1.2\n[supply]\nunits = 2\n'
+            '[requirements]\nworst_gain = { at_most = 0.1 }\n[current]\nmechanism = "pay-as-bid"\n'
+            '[compare]\nmechanisms = ["uniform-price"]\n',
+            encoding="utf-8",
+        )
+        text = report(gather(read_market(path)), "table")
+        changes = text.partition("Change from")[2].partition("Requirements")[0]
+        assert re.search(r"\sfrom\s", changes)
+        assert "infinite" in changes
+        assert "no number" not in text
+        assert "worst_gain at most 0.1: not searched, as sizes are searched up to 10^12 bidders" in text
 
     def test_growth_path(self, tmp_path):
         """A growth path has a block for every size."""

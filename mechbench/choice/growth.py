@@ -28,14 +28,15 @@ class Size:
 
     Attributes
     ----------
-    kind : "from", "once", "nowhere" or "unknown"
+    kind : "from", "once", "nowhere", "unknown" or "unsearched"
         Met from `bidders` on, at every size looked at; met at `bidders`, but missed again at `again`; at no
-        size looked at; or not to be searched, because the rule's measure has no exact integral.
+        size looked at; not to be searched, because the rule's measure has no exact integral; or not searched,
+        because the market is as large as the search goes already.
     bidders, again : int
         See `kind`; 0 where they do not apply.
     """
 
-    kind: Literal["from", "once", "nowhere", "unknown"]
+    kind: Literal["from", "once", "nowhere", "unknown", "unsearched"]
     bidders: int = 0
     again: int = 0
 
@@ -56,6 +57,8 @@ def size_that_meets(
             return None
         return [verdict(requirement, Finding(estimate)).word == "met" for estimate in found]
 
+    if start >= MOST_BIDDERS:
+        return Size("unsearched")
     doublings = [start << power for power in range((MOST_BIDDERS // start).bit_length())]
     if doublings[-1] < MOST_BIDDERS:
         doublings.append(MOST_BIDDERS)

@@ -214,10 +214,12 @@ def difference(first: Finding, second: Finding) -> Finding:
 
 
 def equal(first: Finding, second: Finding) -> bool:
-    """Whether two numbers are the same, not merely within their errors."""
+    """Whether two amounts of money, or two shares, are the same, not merely within their errors.
+
+    As a share of the larger: money may be counted in any unit, and shares that are ranked are close to 1.
+    """
     gap = difference(first, second)
-    scale = max(abs(first.value), abs(second.value), 1.0)
-    return math.isfinite(gap.value) and abs(gap.value) + gap.error <= _SAME * scale
+    return math.isfinite(gap.value) and abs(gap.value) + gap.error <= _SAME * _size(first, second)
 
 
 def _first(meets: Sequence[int], goal: Sequence[Finding]) -> list[int]:
@@ -232,9 +234,12 @@ def _first(meets: Sequence[int], goal: Sequence[Finding]) -> list[int]:
 
 def _ahead(first: Finding, second: Finding) -> bool:
     """Whether the first number is larger beyond their combined error."""
-    scale = max(abs(first.value), abs(second.value), 1.0)
     low, _ = interval(difference(first, second))
-    return low > _SAME * scale
+    return low > _SAME * _size(first, second)
+
+
+def _size(first: Finding, second: Finding) -> float:
+    return max(abs(first.value), abs(second.value))
 
 
 def _distance(verdicts: Sequence[Verdict]) -> tuple[int, float]:

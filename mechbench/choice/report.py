@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 
 from mechbench.choice.evidence import SHOWN, AtSize, Evidence
@@ -26,6 +27,7 @@ _LAW = (
     "An auction's rules may fall under competition, procurement, tax, securities or sector law: counsel and the "
     "regulator's own rule book decide."
 )
+_MOST = f"10^{len(str(MOST_BIDDERS)) - 1}"
 _EXACT_BELOW = 1_000_000
 """Sizes below this are told to the bidder, larger ones to three digits."""
 
@@ -132,7 +134,11 @@ def _cell(finding: Finding) -> str:
 
 
 def _change_cell(candidate: Candidate, today: Candidate, measure: str) -> str:
-    gap = difference(candidate.findings[measure], today.findings[measure])
+    before, after = today.findings[measure], candidate.findings[measure]
+    if math.isinf(before.value) or math.isinf(after.value):
+        side = "both" if before.value == after.value else "from" if math.isinf(before.value) else "to"
+        return f"{side}\ninfinite"
+    gap = difference(after, before)
     told = change(gap.value, largest_error(gap.estimate.error, gap.log_error))
     error = _told_error(gap)
     return f"{told}\n± {error}" if error else told
@@ -196,7 +202,8 @@ def _size_words(evidence: Evidence, size: Size) -> str:
     units = evidence.file.supply.units
     told: dict[str, Callable[[], str]] = {
         "unknown": lambda: "not searched, as this rule has no exact integral for it",
-        "nowhere": lambda: f"not at any size up to 10^{len(str(MOST_BIDDERS)) - 1} bidders",
+        "nowhere": lambda: f"not at any size up to {_MOST} bidders",
+        "unsearched": lambda: f"not searched, as sizes are searched up to {_MOST} bidders",
         "from": lambda: (
             f"from {_count(size.bidders)} bidders on ({_count(units(size.bidders))} units)"
             f"{_beyond_log(evidence, size.bidders)}"

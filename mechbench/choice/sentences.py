@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 
 from mechbench.choice.judge import Candidate, Decision, Finding, Verdict, difference, equal, interval
@@ -39,9 +40,8 @@ def finding_words(finding: Finding) -> str:
 
 def money_words(file: MarketFile, candidate: Candidate) -> str:
     """Tell both revenues of a rule."""
-    revenue, shaded = (finding_words(candidate.findings[name]) for name in ("revenue", "shaded_revenue"))
-    unit = f" {file.currency}" if file.currency else ""
-    return f"{revenue}{unit} if nobody shades, {shaded}{unit} if each alone shades"
+    revenue, shaded = (_money(file, candidate.findings[name]) for name in ("revenue", "shaded_revenue"))
+    return f"{revenue} if nobody shades, {shaded} if each alone shades"
 
 
 def _one(file: MarketFile, candidates: Sequence[Candidate], decision: Decision, current: int | None) -> str:
@@ -123,6 +123,8 @@ def _tie(file: MarketFile, candidates: Sequence[Candidate], decision: Decision, 
     goal = file.objective
     if all(equal(first, candidate.findings[goal]) for candidate in tied[1:]):
         how = f"{rules} come out equal by {goal}, {_amount(file, tied[0])}"
+    elif endless := [one.rule for one in tied if math.isinf(one.findings[goal].value)]:
+        how = f"{rules} cannot be ranked by {goal}, whose mean is infinite under {_listed(endless)}"
     else:
         each = _listed([f"{_amount(file, one)} for {one.rule}" for one in tied])
         how = f"the evidence cannot separate {rules} by {goal}: {each}, and the difference is within its error"
@@ -175,7 +177,8 @@ def _amount(file: MarketFile, candidate: Candidate) -> str:
 
 
 def _money(file: MarketFile, finding: Finding) -> str:
-    return f"{finding_words(finding)} {file.currency}".rstrip()
+    told = "an infinite mean" if math.isinf(finding.value) else finding_words(finding)
+    return f"{told} {file.currency}".rstrip() if told[-1].isdigit() else told
 
 
 def _second(file: MarketFile, candidates: Sequence[Candidate], decision: Decision) -> Candidate:
