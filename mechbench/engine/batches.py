@@ -22,7 +22,7 @@ _BATCHES = 2**10
 """Batches, once there are so many draws; before, every draw is one. The draws go on in powers of two."""
 _FIRST = 2**22
 """Numbers that the first look at the estimates may rest on."""
-_MOST = (2**24, 2**31)
+_MOST = (2**22, 2**30)
 """Draws, and numbers drawn, after which to stop if nobody says otherwise."""
 
 

@@ -142,7 +142,7 @@ def simulate(
     threshold : float
         The gain above which ``gain_chance`` counts.
     max_draws : int, optional
-        At most so many draws, at least 64; 2^24 unless given, fewer where each holds many bids. Draws come in
+        At most so many draws, at least 64; 2^22 unless given, fewer where each holds many bids. Draws come in
         doublings, so as few as half of that may be made. An error not reached then is said in the status.
     progress : callable, optional
         Called with the number of draws made so far; interim gains start again from 0.
