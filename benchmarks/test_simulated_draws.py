@@ -14,7 +14,7 @@ import pytest
 
 from mechbench.contract import Floats
 from mechbench.discovery import family_class
-from mechbench.engine.draws import lowest_uniforms
+from mechbench.engine.simulated.draws import lowest_uniforms
 
 _BIDS = 2**15
 

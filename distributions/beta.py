@@ -33,9 +33,7 @@ __all__ = ["Beta"]
 
 def _power(name: str, meaning: str, *typical: float) -> Parameter:
     """One of the two parameters, which share their domain."""
-    return Parameter(
-        name, meaning, low=0.1, low_included=True, high=1000, high_included=True, typical=typical
-    )
+    return Parameter(name, meaning, low=0.1, low_included=True, high=1000, high_included=True, typical=typical)
 
 
 class Beta(Distribution):

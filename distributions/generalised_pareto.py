@@ -31,9 +31,7 @@ class GeneralisedPareto(Distribution):
     name = "generalised-pareto"
     title = "a tail of any index, from 0 on"
     parameters = (
-        Parameter(
-            "tail_index", "above 0 a power tail, below 0 a bounded end", typical=(0.3, 0.0, -0.3, -2.0, 1.5)
-        ),
+        Parameter("tail_index", "above 0 a power tail, below 0 a bounded end", typical=(0.3, 0.0, -0.3, -2.0, 1.5)),
         Parameter("scale", "reciprocal of the density at 0", low=0, typical=(20.0, 1.0), default=1.0),
     )
 

@@ -31,9 +31,7 @@ class HalfNormal(Distribution):
 
     name = "half-normal"
     title = "the size of a normal deviation"
-    parameters = (
-        Parameter("scale", "standard deviation of the normal law", low=0, typical=(25.0, 1.0), default=1.0),
-    )
+    parameters = (Parameter("scale", "standard deviation of the normal law", low=0, typical=(25.0, 1.0), default=1.0),)
 
     def prepare(self) -> None:
         """Read the settings."""

@@ -26,9 +26,7 @@ class Pareto(Distribution):
     name = "pareto"
     title = "a pure power tail from a lowest value on"
     parameters = (
-        Parameter(
-            "tail_index", "weight of the tail; the mean is infinite from 1 on", low=0, typical=(0.5, 0.1, 2.0)
-        ),
+        Parameter("tail_index", "weight of the tail; the mean is infinite from 1 on", low=0, typical=(0.5, 0.1, 2.0)),
         Parameter("scale", "lowest value", low=0, typical=(10.0, 1.0), default=1.0),
     )
 

@@ -26,9 +26,7 @@ class Weibull(Distribution):
     name = "weibull"
     title = "hazard rate rising or falling like a power"
     parameters = (
-        Parameter(
-            "shape", "above 1 the hazard rate rises, below 1 it falls", low=0, typical=(1.5, 0.5, 0.2, 20.0)
-        ),
+        Parameter("shape", "above 1 the hazard rate rises, below 1 it falls", low=0, typical=(1.5, 0.5, 0.2, 20.0)),
         Parameter("scale", "value exceeded by 37 in a hundred", low=0, typical=(25.0, 1.0), default=1.0),
     )
 

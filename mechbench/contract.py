@@ -184,9 +184,7 @@ class Distribution(ABC):
     """Distance in log odds of s over which ten terms catch ``log Q``; less for a family with steep ends."""
 
     def __init__(self, **settings: Setting) -> None:
-        self.settings: dict[str, Setting] = dict(
-            checked_settings(self.parameters, settings, f"family {self.name}")
-        )
+        self.settings: dict[str, Setting] = dict(checked_settings(self.parameters, settings, f"family {self.name}"))
         self.prepare()
 
     def prepare(self) -> None:  # noqa: B027 - most families have nothing to prepare
@@ -293,13 +291,9 @@ class Distribution(ABC):
             near = way < self.smooth_over
             if near.any():
                 nodes, weights = _mean_of_way()
-                slope = self._log_slope(
-                    np.minimum(s, _BELOW_ONE)[..., None], self.smooth_over * nodes, by_end
-                )
+                slope = self._log_slope(np.minimum(s, _BELOW_ONE)[..., None], self.smooth_over * nodes, by_end)
                 series = np.broadcast_to(slope @ weights, (*near.shape, nodes.size))[near]
-                mean = np.polynomial.chebyshev.chebval(
-                    2.0 / self.smooth_over * way[near] - 1.0, series.T, tensor=False
-                )
+                mean = np.polynomial.chebyshev.chebval(2.0 / self.smooth_over * way[near] - 1.0, series.T, tensor=False)
                 base = np.where(by_end, shortfall / higher, 1.0)[near]
                 drop[near] = base * -np.expm1(-way[near] * mean)
         return drop
@@ -503,9 +497,7 @@ class Mechanism(ABC):
     parameters: ClassVar[tuple[Parameter, ...]] = ()
 
     def __init__(self, **settings: Setting) -> None:
-        self.settings: dict[str, float | str] = checked_settings(
-            self.parameters, settings, f"mechanism {self.name}"
-        )
+        self.settings: dict[str, float | str] = checked_settings(self.parameters, settings, f"mechanism {self.name}")
 
     def __repr__(self) -> str:
         """Show the rule as it would be written: name and settings."""

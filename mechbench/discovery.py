@@ -56,9 +56,7 @@ def _folder(room: str) -> Path:
 
 
 def _names(room: str) -> list[str]:
-    return sorted(
-        path.stem.replace("_", "-") for path in _folder(room).glob("*.py") if not path.stem.startswith("_")
-    )
+    return sorted(path.stem.replace("_", "-") for path in _folder(room).glob("*.py") if not path.stem.startswith("_"))
 
 
 def _load(name: str, room: str, kind: str, base: type[_P]) -> type[_P]:

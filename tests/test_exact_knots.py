@@ -6,7 +6,7 @@ import math
 
 import pytest
 
-from mechbench.contract import MEASURES, MONEY, IdenticalUnits
+from mechbench.contract import MEASURES, MONEY, Distribution, IdenticalUnits
 from mechbench.discovery import family_class, mechanism_class
 from mechbench.engine.evaluate import evaluate
 from mechbench.market.market import Market
@@ -18,7 +18,7 @@ RULES = [
 ]
 
 
-def _exponential_in_pieces(levels: tuple[float, ...], share: float):
+def _exponential_in_pieces(levels: tuple[float, ...], share: float) -> Distribution:
     """Build an `empirical` law that is exponential: one reciprocal hazard rate everywhere, tail index 0."""
     return family_class("empirical")(
         tail_index=0.0,

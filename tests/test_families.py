@@ -219,11 +219,7 @@ def test_tail_index_is_the_slope_of_the_inverse_hazard(family: Distribution) -> 
     hazard, value = family.inverse_hazard(s), family.upper_quantile(s)
     slope = (hazard[0] - hazard[1]) / (value[0] - value[1])
     # The lognormal's slope falls to 0 only like sigma / sqrt(2 log(1 / s)).
-    room = (
-        0.02
-        if family.name != "lognormal"
-        else 1.5 * family.number("sigma") / math.sqrt(2 * 80 * math.log(10))
-    )
+    room = 0.02 if family.name != "lognormal" else 1.5 * family.number("sigma") / math.sqrt(2 * 80 * math.log(10))
     assert abs(slope - family.tail_index) < room
 
 
@@ -333,9 +329,7 @@ def test_unknown_and_missing_settings_are_refused(name: str) -> None:
 
 def test_uniform_ends_must_be_in_order() -> None:
     """A uniform family whose low end is not below its high end is refused."""
-    with pytest.raises(
-        InputError, match="family uniform: low is 7 and high is 3; accepted is low below high"
-    ):
+    with pytest.raises(InputError, match="family uniform: low is 7 and high is 3; accepted is low below high"):
         family_class("uniform")(low=7, high=3)
 
 
@@ -355,9 +349,7 @@ def outside() -> dict[str, tuple[Distribution, object]]:
         "pareto": ({"tail_index": 0.4, "scale": 10}, stats.pareto(2.5, scale=10)),
         "generalised-pareto": ({"tail_index": -0.2, "scale": 20}, stats.genpareto(-0.2, scale=20)),
     }
-    return {
-        name: (family_class(name)(**chosen), there) for name, (chosen, there) in settings_and_laws.items()
-    }
+    return {name: (family_class(name)(**chosen), there) for name, (chosen, there) in settings_and_laws.items()}
 
 
 def test_families_agree_with_scipy_stats() -> None:

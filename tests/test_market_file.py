@@ -35,9 +35,7 @@ shape = 1.4
 [supply]
 units = 12
 """
-LOGGED = SMALL.replace(
-    'family = "weibull"\nshape = 1.4', 'log = "bids.csv"\nbid = "offer"\nbids_are = "values"'
-)
+LOGGED = SMALL.replace('family = "weibull"\nshape = 1.4', 'log = "bids.csv"\nbid = "offer"\nbids_are = "values"')
 
 
 def written(folder, text):
@@ -317,9 +315,7 @@ class TestPlugIns:
         other = type("Other", (Mechanism,), {"name": "other", "serves": frozenset({"ranked slots"})})
         monkeypatch.setattr(discovery, "mechanism_class", lambda _: other)
         message = refusal(written(tmp_path, SMALL + '[current]\nmechanism = "other"'))
-        assert (
-            "current.mechanism: other serves ranked slots; accepted is a rule for identical units" in message
-        )
+        assert "current.mechanism: other serves ranked slots; accepted is a rule for identical units" in message
 
     def test_settings_that_do_not_fit_together(self, tmp_path):
         """A combination that the family itself refuses names the file and the table."""

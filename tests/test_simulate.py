@@ -14,10 +14,10 @@ from scipy import stats
 
 from mechbench.contract import MEASURES, Floats, IdenticalUnits, InputError, Mechanism, Outcome
 from mechbench.discovery import family_class, mechanism_class
-from mechbench.engine import batches
-from mechbench.engine.draws import _one_minus_exp, bids_at, generators, lowest_uniforms, tiers
-from mechbench.engine.intervals import Ratio, chance_half_width, difference_half_width
-from mechbench.engine.simulate import Simulation, simulate
+from mechbench.engine.simulated import batches
+from mechbench.engine.simulated.draws import _one_minus_exp, bids_at, generators, lowest_uniforms, tiers
+from mechbench.engine.simulated.intervals import Ratio, chance_half_width, difference_half_width
+from mechbench.engine.simulated.simulate import Simulation, simulate
 from mechbench.market.market import Market
 
 PAY_AS_BID = mechanism_class("pay-as-bid")()

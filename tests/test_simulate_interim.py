@@ -8,9 +8,9 @@ from scipy import integrate, special
 
 from mechbench.contract import Floats, IdenticalUnits, Mechanism, Outcome
 from mechbench.discovery import family_class, mechanism_class
-from mechbench.engine import responses
-from mechbench.engine.responses import InterimDraws
-from mechbench.engine.simulate import simulate
+from mechbench.engine.simulated import responses
+from mechbench.engine.simulated.responses import InterimDraws
+from mechbench.engine.simulated.simulate import simulate
 from mechbench.market.market import Market
 
 PAY_AS_BID = mechanism_class("pay-as-bid")()

@@ -13,7 +13,7 @@ from scipy import stats
 from mechbench.contract import MEASURES, MONEY, IdenticalUnits, Mechanism
 from mechbench.discovery import family_class, mechanism_class
 from mechbench.engine.evaluate import evaluate
-from mechbench.engine.simulate import simulate
+from mechbench.engine.simulated.simulate import simulate
 from mechbench.market.market import Market
 
 RULES: dict[str, Mechanism] = {

@@ -13,9 +13,9 @@ from collections.abc import Callable, Mapping, Sequence
 import numpy as np
 
 from mechbench.contract import MONEY, Floats, Mechanism
-from mechbench.engine.amounts import IF_SOLD, Amounts, draw_amounts
-from mechbench.engine.draws import bids_at, depth_of, lowest_uniforms, tiers
-from mechbench.engine.tails import INFINITE, heavy_amounts
+from mechbench.engine.simulated.amounts import IF_SOLD, Amounts, draw_amounts
+from mechbench.engine.simulated.draws import bids_at, depth_of, lowest_uniforms, tiers
+from mechbench.engine.simulated.tails import INFINITE, heavy_amounts
 from mechbench.market.market import Market
 
 __all__ = ["resampled_findings", "unseen_chance"]

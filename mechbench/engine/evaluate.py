@@ -64,20 +64,15 @@ def evaluate(
     found: dict[str, Estimate] = {}
     if method != "simulated":
         for measure in measures:
-            exact = evaluate_sizes(
-                [market], mechanism, measure, error=error or EXACT_ERROR, threshold=threshold
-            )
+            exact = evaluate_sizes([market], mechanism, measure, error=error or EXACT_ERROR, threshold=threshold)
             if exact is not None:
                 found[measure] = exact[0]
             elif method == "exact":
-                msg = (
-                    f"measure {measure} of {mechanism!r} has no exact integral; "
-                    f"accepted is method auto or simulated"
-                )
+                msg = f"measure {measure} of {mechanism!r} has no exact integral; accepted is method auto or simulated"
                 raise InputError(msg)
     rest = [measure for measure in measures if measure not in found]
     if rest:
-        from mechbench.engine.simulate import simulate  # noqa: PLC0415 - only where it is needed
+        from mechbench.engine.simulated.simulate import simulate  # noqa: PLC0415 - only where it is needed
 
         simulation = simulate(
             market,

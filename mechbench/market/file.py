@@ -332,8 +332,7 @@ def _plug_in(table: Table, key: str, place: Place) -> tuple[str, dict[str, float
     _check_use(plug_in, place.at(key))
     refuse_unknown(place, table, [key, *(parameter.name for parameter in plug_in.parameters)])
     settings = {
-        parameter.name: _setting(parameter, table, place.at(parameter.name))
-        for parameter in plug_in.parameters
+        parameter.name: _setting(parameter, table, place.at(parameter.name)) for parameter in plug_in.parameters
     }
     try:
         plug_in(**settings)

@@ -83,8 +83,7 @@ def _values(file: MarketFile, values: Distribution) -> list[_Piece]:
         named = f"Values: fitted to the bids in {file.values.path.name}, column {file.values.bid}"
         return [(named, ""), (f", tail index {_rounded(values.tail_index)}", "fitted"), *told]
     settings = [
-        (f", {name} {_setting(value)}", _mark(file, f"values.{name}"))
-        for name, value in file.values.settings.items()
+        (f", {name} {_setting(value)}", _mark(file, f"values.{name}")) for name, value in file.values.settings.items()
     ]
     return [(f"Values: {file.values.name}", "given"), *settings, *told]
 
@@ -127,9 +126,7 @@ def _rules(file: MarketFile) -> list[_Piece]:
 
 
 def _rule(choice: MechanismChoice) -> str:
-    defaults = {
-        parameter.name: parameter.default for parameter in discovery.mechanism_class(choice.name).parameters
-    }
+    defaults = {parameter.name: parameter.default for parameter in discovery.mechanism_class(choice.name).parameters}
     settings = ", ".join(
         f"{name} {_setting(value)}" for name, value in choice.settings.items() if value != defaults[name]
     )

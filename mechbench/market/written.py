@@ -50,9 +50,7 @@ _LONGEST = 60
 _Amount = Annotated[float, Meta(ge=0, le=sys.float_info.max, description="a finite number of at least 0")]
 _Count = Annotated[int, Meta(ge=2, le=_MOST)]
 _Share = Annotated[float, Meta(gt=0, lt=1, description="a number above 0 and below 1")]
-_Line = Annotated[
-    str, Meta(min_length=1, max_length=120, description="a line of text, at most 120 characters")
-]
+_Line = Annotated[str, Meta(min_length=1, max_length=120, description="a line of text, at most 120 characters")]
 
 
 class Document(Struct, forbid_unknown_fields=True, frozen=True):
@@ -100,9 +98,9 @@ class Log(Struct, forbid_unknown_fields=True, frozen=True):
 class Supply(Struct, forbid_unknown_fields=True, frozen=True):
     """The table [supply]."""
 
-    units: Annotated[
-        Annotated[int, Meta(ge=1, le=_MOST)] | None, Meta(description="a whole number of at least 1")
-    ] = None
+    units: Annotated[Annotated[int, Meta(ge=1, le=_MOST)] | None, Meta(description="a whole number of at least 1")] = (
+        None
+    )
     units_per_bidder: _Share | None = None
     units_exponent: _Share | None = None
     reserve: _Amount = 0.0

@@ -53,9 +53,7 @@ def searched_gains(mechanism: Mechanism, bids: Floats, supply: IdenticalUnits, o
     return gains
 
 
-def searched_least_payments(
-    mechanism: Mechanism, bids: Floats, supply: IdenticalUnits, outcome: Outcome
-) -> Floats:
+def searched_least_payments(mechanism: Mechanism, bids: Floats, supply: IdenticalUnits, outcome: Outcome) -> Floats:
     """Least payment over the searched reports that keep at least the allocation, array (draws, bidders)."""
     least = outcome.payment.copy()
     for bidder in range(bids.shape[1]):

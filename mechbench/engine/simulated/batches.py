@@ -77,9 +77,7 @@ def doublings(
         yield sums, draws
 
 
-def _sums(
-    source: Draws, draws: int, batches: int, progress: Callable[[int], None] | None, already: int
-) -> Floats:
+def _sums(source: Draws, draws: int, batches: int, progress: Callable[[int], None] | None, already: int) -> Floats:
     """Make new draws and sum them over equal batches; both counts are powers of two."""
     size = draws // batches
     height = min(draws, _ROWS)
@@ -92,9 +90,7 @@ def _sums(
             if progress is not None:
                 progress(already + start + min(at + block, height))
         if size <= height:
-            sums[start // size : (start + height) // size] = rows.reshape(-1, size, source.columns).sum(
-                axis=1
-            )
+            sums[start // size : (start + height) // size] = rows.reshape(-1, size, source.columns).sum(axis=1)
         else:
             sums[start // size] += rows.sum(axis=0)
     return sums

@@ -24,8 +24,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mechbench.contract import Floats, Mechanism
-from mechbench.engine.draws import bids_at, depth_of, generators, lowest_uniforms, tiers
-from mechbench.engine.intervals import Ratio
+from mechbench.engine.simulated.draws import bids_at, depth_of, generators, lowest_uniforms, tiers
+from mechbench.engine.simulated.intervals import Ratio
 from mechbench.market.market import Market
 
 __all__ = ["InterimDraws"]

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mechbench.contract import Floats, IdenticalUnits, Mechanism, Outcome
-from mechbench.engine.deviations import searched_gains, searched_least_payments
+from mechbench.engine.simulated.deviations import searched_gains, searched_least_payments
 
 __all__ = ["IF_SOLD", "Amounts", "draw_amounts"]
 

@@ -12,12 +12,12 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
 from mechbench.contract import MEASURES, MONEY, InputError, Mechanism
-from mechbench.engine.batches import FEWEST, doublings
-from mechbench.engine.crowd import CrowdDraws
 from mechbench.engine.estimate import Estimate
-from mechbench.engine.intervals import Ratio, difference_half_width
-from mechbench.engine.responses import InterimDraws
-from mechbench.engine.tails import INFINITE
+from mechbench.engine.simulated.batches import FEWEST, doublings
+from mechbench.engine.simulated.crowd import CrowdDraws
+from mechbench.engine.simulated.intervals import Ratio, difference_half_width
+from mechbench.engine.simulated.responses import InterimDraws
+from mechbench.engine.simulated.tails import INFINITE
 from mechbench.market.market import Market
 
 __all__ = ["Simulation", "simulate"]

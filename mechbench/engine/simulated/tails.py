@@ -12,7 +12,7 @@ from __future__ import annotations
 from collections.abc import Collection, Mapping
 
 from mechbench.contract import MONEY, Floats, Mechanism
-from mechbench.engine.amounts import draw_amounts
+from mechbench.engine.simulated.amounts import draw_amounts
 from mechbench.market.market import Market
 
 __all__ = ["HEAVY", "INFINITE", "INFINITE_VARIANCE", "heavy_amounts"]
@@ -26,9 +26,7 @@ _PART = 1e-3
 """Share of the rise of the lowest raised bid that an amount must take to count as growing with it."""
 
 
-def heavy_amounts(
-    market: Market, mechanism: Mechanism, measures: Collection[str], bids: Floats
-) -> Mapping[str, str]:
+def heavy_amounts(market: Market, mechanism: Mechanism, measures: Collection[str], bids: Floats) -> Mapping[str, str]:
     """Find the money measures of which a moment is infinite.
 
     Parameters

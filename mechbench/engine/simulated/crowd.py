@@ -7,10 +7,10 @@ from collections.abc import Sequence
 import numpy as np
 
 from mechbench.contract import MONEY, Floats, Mechanism
-from mechbench.engine.amounts import IF_SOLD, draw_amounts
-from mechbench.engine.draws import bids_at, depth_of, generators, lowest_uniforms, tiers
-from mechbench.engine.intervals import Ratio
-from mechbench.engine.tails import heavy_amounts
+from mechbench.engine.simulated.amounts import IF_SOLD, draw_amounts
+from mechbench.engine.simulated.draws import bids_at, depth_of, generators, lowest_uniforms, tiers
+from mechbench.engine.simulated.intervals import Ratio
+from mechbench.engine.simulated.tails import heavy_amounts
 from mechbench.market.market import Market
 
 __all__ = ["LOWER_BOUND", "CrowdDraws"]
@@ -63,9 +63,7 @@ class CrowdDraws:
         bids.flags.writeable = False
         size = len(self._measures) + 1
         for i, mechanism in enumerate(self._mechanisms):
-            amounts = draw_amounts(
-                mechanism, self._seen(bids, i), self._market.supply, self._measures, self._threshold
-            )
+            amounts = draw_amounts(mechanism, self._seen(bids, i), self._market.supply, self._measures, self._threshold)
             for place, measure in enumerate(self._measures):
                 rows[:, i * size + place] = amounts.of[measure]
             rows[:, i * size + size - 1] = amounts.sold
@@ -104,9 +102,7 @@ class CrowdDraws:
         return {
             (i, measure): note
             for i, mechanism in enumerate(self._mechanisms)
-            for measure, note in heavy_amounts(
-                self._market, mechanism, self._measures, self._seen(bids, i)
-            ).items()
+            for measure, note in heavy_amounts(self._market, mechanism, self._measures, self._seen(bids, i)).items()
         }
 
     def _bids(self, sources: Sequence[np.random.Generator], draws: int) -> Floats:
