@@ -182,3 +182,16 @@ def test_a_reserve_above_all_bids_sells_nothing(rule: Mechanism):
     assert not outcome.payment.any()
     assert not rule.gains(bids, supply).any()
     assert not rule.least_payments(bids, supply).any()
+
+
+@pytest.mark.parametrize("units", [1, 3, 6, 9])
+def test_rows_in_falling_order_need_no_sorting(units):
+    """Bids that come in falling order are served as the same bids in any order are, ties by position."""
+    rng = np.random.default_rng(11)
+    falling = -np.sort(-np.round(rng.exponential(2.0, (200, 6))), axis=1)
+    supply = IdenticalUnits(units, 1.0)
+    alone, threshold = supply.highest(falling)
+    rising_last = np.vstack([falling, np.arange(6.0)])
+    beside, threshold_beside = supply.highest(rising_last)
+    np.testing.assert_array_equal(alone, beside[:-1])
+    np.testing.assert_array_equal(threshold, threshold_beside[:-1])
