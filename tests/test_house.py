@@ -6,6 +6,7 @@ import ast
 import json
 import subprocess
 import sys
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -77,3 +78,13 @@ def test_a_checkout_finds_its_own_plug_ins(tmp_path):
     code = "import mechbench.discovery as d; print('only-here' in d.families(), 'pay-as-bid' in d.mechanisms())"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=tmp_path)
     assert done.stdout.split() == ["True", "True"]
+
+
+def test_every_package_is_shipped():
+    """Each folder of code is named in pyproject.toml, so that an installed copy is whole."""
+    listed = set(tomllib.loads((ROOT / "pyproject.toml").read_text())["tool"]["setuptools"]["packages"])
+    found = {".".join(path.parent.relative_to(ROOT).parts) for path in (ROOT / "mechbench").rglob("__init__.py")} | {
+        "mechbench.mechanisms",
+        "mechbench.distributions",
+    }
+    assert listed == found
