@@ -16,7 +16,7 @@ from typing import NoReturn
 
 from mechbench.contract import InputError
 
-__all__ = ["HIGHEST_BID", "LOWEST_BID", "check_header", "quoted", "refuse", "refuse_first_fault"]
+__all__ = ["HIGHEST_BID", "LOWEST_BID", "check_header", "fields_fault", "quoted", "refuse", "refuse_first_fault"]
 
 LOWEST_BID, HIGHEST_BID = 1e-100, 1e100
 """A bid is 0 or between these: anything else is no amount of money."""
@@ -80,8 +80,13 @@ def refuse_first_fault(path: Path, column: str, auction: str | None, reason: str
     except UnicodeDecodeError:
         refuse_encoding(path)
     except csv.Error as error:
-        refuse(path, f"row {row + 1}", f"broken quoting ({error})", "comma-separated text")
+        refuse(path, f"row {row + 1}", fields_fault(error), "comma-separated text")
     refuse(path, f"column {quoted(column)}", reason.splitlines()[0] if reason else "a fault", _ACCEPTED)
+
+
+def fields_fault(error: csv.Error) -> str:
+    """Tell what the reader of fields stumbles over."""
+    return f"{'too long a field' if 'limit' in str(error) else 'broken quoting'} ({error})"
 
 
 def refuse_encoding(path: Path) -> NoReturn:
@@ -112,6 +117,8 @@ def _check_row(path: Path, row: int, fields: list[str], header: list[str], asked
         bid = float(text) if text.isascii() and "_" not in text else math.nan
     except ValueError:
         bid = math.nan
+    if math.isfinite(bid) and bid > 0 and not LOWEST_BID <= bid <= HIGHEST_BID:
+        refuse(path, where, quoted(text), f"0 or an amount from {LOWEST_BID:g} to {HIGHEST_BID:g}")
     if not (bid == 0 or LOWEST_BID <= bid <= HIGHEST_BID):
         refuse(path, where, quoted(text), _ACCEPTED)
 

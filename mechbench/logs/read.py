@@ -103,7 +103,8 @@ def read_log(
         if progress is not None:
             progress(bids.size)
     if summary.bids < LEAST_BIDS:
-        found = f"{summary.bids} bids above 0" if summary.bids + zeros else "no bids below the header"
+        plural = "" if summary.bids == 1 else "s"
+        found = f"{summary.bids} bid{plural} above 0" if summary.bids + zeros else "no bids below the header"
         faults.refuse(path, f"column {faults.quoted(bid)}", found, f"at least {LEAST_BIDS}")
     if summary.exact:
         return _whole(path, bid, summary, zeros, names)
@@ -121,7 +122,7 @@ def _check_file(path: Path, bid: str, auction: str | None) -> int:
     except OSError as error:
         faults.refuse(path, "", error.strerror or "no readable file", "the path of a readable CSV file")
     except csv.Error as error:
-        faults.refuse(path, "row 1", f"broken quoting ({error})", "comma-separated text")
+        faults.refuse(path, "row 1", faults.fields_fault(error), "comma-separated text")
     if header is None:
         faults.refuse(path, "", "an empty file", "a CSV file with a row of column names")
     faults.check_header(path, header, [bid] if auction is None else [bid, auction])
