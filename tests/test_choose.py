@@ -16,7 +16,7 @@ from mechbench.choice.judge import Candidate, Finding, decide, difference, verdi
 from mechbench.choice.report import report
 from mechbench.choice.resampling import resampled_findings
 from mechbench.choice.sentences import recommendation
-from mechbench.contract import IdenticalUnits
+from mechbench.contract import IdenticalUnits, InputError
 from mechbench.engine.estimate import Estimate
 from mechbench.engine.evaluate import evaluate
 from mechbench.logs.fit import fit_log, log_interval, resampled_fits
@@ -349,6 +349,33 @@ class TestLogs:
             changes = np.array(exact[1:]) - exact[0]
             reach = 0.15 * np.abs(changes).max()
             assert moved[0, measure] == pytest.approx(changes, abs=reach), measure
+
+    @pytest.mark.parametrize(
+        ("change", "word"),
+        [(("count = 40", "count = 2\nturnout = 1e-6"), "met"), (("count = 40", "count = 40"), "met")],
+    )
+    def test_nought_by_the_rule(self, logged, change, word, monkeypatch):
+        """A gain that is 0 by the rule itself is 0 under every law; money that no draw shows is not known."""
+        monkeypatch.setattr("mechbench.choice.evidence._RESAMPLES", 4)
+        path = logged.with_name("thin.toml")
+        text = logged.read_text(encoding="utf-8").replace(*change)
+        path.write_text(text.replace("units = 4", "units = 1"), encoding="utf-8")
+        found = gather(read_market(path))
+        payer, uniform = found.sizes[0].candidates
+        assert verdict(GAIN, uniform.findings["worst_gain"]).word == word
+        error = payer.findings["revenue"].log_error
+        assert error == math.inf if "turnout" in change[1] else 0 < error < math.inf
+
+    def test_a_reserve_near_the_highest_bids(self, logged):
+        """A reserve that some resamples of the log never reach is refused in words that say so."""
+        log = read_log(logged.with_name("bids.csv"), bid="offer")
+        end = min(fit.values.support[1] for fit in resampled_fits(log, 20, np.random.default_rng(0)))
+        assert end < fit_log(log).values.support[1]
+        path = logged.with_name("high.toml")
+        text = logged.read_text(encoding="utf-8").replace("units = 4", f"units = 4\nreserve = {end}")
+        path.write_text(text, encoding="utf-8")
+        with pytest.raises(InputError, match="by some resamples of the log nothing"):
+            gather(read_market(path))
 
 
 class TestUnseenChances:

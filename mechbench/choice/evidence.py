@@ -154,7 +154,7 @@ def _from_log(
     sizes = []
     for bidders in file.bidders:
         at = _at_size(file, fit.values, rules, measures, bidders)
-        markets = [file.market(values, bidders) for values in again]
+        markets = _markets(file, again, bidders)
         changes = resampled_findings(
             at.market,
             markets,
@@ -174,6 +174,18 @@ def _from_log(
     return Evidence(file, fit.values, rules, tuple(sizes), left_out, log, fit)
 
 
+def _markets(file: MarketFile, resampled: Sequence[Distribution], bidders: int) -> list[Market]:
+    """Make the market under each law of the resampled logs, all of which must leave something to sell."""
+    try:
+        return [file.market(values, bidders) for values in resampled]
+    except InputError as error:
+        msg = (
+            f"{file.source}: supply: found a reserve of {file.supply.reserve:g} so close to the highest bids that by "
+            f"some resamples of the log nothing ever sells; accepted is one that the log often exceeds"
+        )
+        raise InputError(msg) from error
+
+
 def _spread(
     candidates: Sequence[Candidate], changes: Mapping[tuple[int, str], Floats], unseen: float
 ) -> tuple[Candidate, ...]:
@@ -184,7 +196,7 @@ def _spread(
             {
                 measure: Finding(
                     finding.estimate,
-                    _moved(measure, finding.value, changes[place, measure]),
+                    _moved(measure, finding, changes[place, measure]),
                     blur=_blur(measure, finding, unseen),
                 )
                 for measure, finding in candidate.findings.items()
@@ -196,13 +208,20 @@ def _spread(
 
 def _blur(measure: str, finding: Finding, unseen: float) -> float:
     """How far off the resampled numbers of a chance may be that the draws hardly ever, or nearly always, see."""
-    known = finding.value == 0 and finding.estimate.error == 0
     rare = min(finding.value, 1.0 - finding.value) < 3.0 * unseen
-    return unseen if measure in {"gain_chance", "no_sale"} and rare and not known else 0.0
+    return unseen if measure in {"gain_chance", "no_sale"} and rare and not _always_nought(finding) else 0.0
 
 
-def _moved(measure: str, value: float, change: Floats) -> Floats:
+def _always_nought(finding: Finding) -> bool:
+    """Whether a number is 0 by the rule itself, whatever the law of the values."""
+    return finding.value == 0 and finding.estimate.error == 0 and finding.estimate.method == "exact"
+
+
+def _moved(measure: str, finding: Finding, change: Floats) -> Floats:
     """Return the resampled numbers: never negative, and shares never above 1; infinite ones stay so."""
+    value = finding.value
+    if measure not in MONEY and _always_nought(finding):
+        return np.zeros_like(change)
     if math.isinf(value):
         return np.where(np.isinf(change), change, math.nan)
     return np.clip(value + change, 0.0, math.inf if measure in MONEY else 1.0)

@@ -57,7 +57,7 @@ def _block(evidence: Evidence, at: AtSize, style: Style) -> list[str]:
     """One size: the rules side by side, the changes, the requirements, the recommendation, the sizes needed."""
     file = evidence.file
     decision = decide(at.candidates, file.requirements, file.objective)
-    where = f"{at.market.bidders:,} bidders, {at.market.supply.units:,} units"
+    where = f"{at.market.bidders:,} bidders, {_units(at.market.supply.units, '{:,}'.format)}"
     parts = [heading(f"Rules side by side: {where}", style), _levels(evidence, at, style)]
     parts.append(bullets(_footnotes(at), style))
     if evidence.current is not None and len(at.candidates) > 1:
@@ -194,7 +194,9 @@ def _sizes(evidence: Evidence, at: AtSize, decision: Decision) -> list[str]:
             if one.word == "met":
                 continue
             size = size_that_meets(evidence.file, evidence.values, rule.mechanism, one.requirement, at.market.bidders)
-            lines.append(f"{rule.name}, {bound_words(one)}: {_size_words(evidence, size)}.")
+            now = size.kind == "from" and size.bidders == at.market.bidders
+            told = "met already, if the number is taken as it stands" if now else _size_words(evidence, size)
+            lines.append(f"{rule.name}, {bound_words(one)}: {told}.")
     return lines
 
 
@@ -205,11 +207,11 @@ def _size_words(evidence: Evidence, size: Size) -> str:
         "nowhere": lambda: f"not at any size up to {_MOST} bidders",
         "unsearched": lambda: f"not searched, as sizes are searched up to {_MOST} bidders",
         "from": lambda: (
-            f"from {_count(size.bidders)} bidders on ({_count(units(size.bidders))} units)"
+            f"from {_count(size.bidders)} bidders on ({_units(units(size.bidders), _count)})"
             f"{_beyond_log(evidence, size.bidders)}"
         ),
         "once": lambda: (
-            f"not monotone: met at {_count(size.bidders)} bidders ({_count(units(size.bidders))} units), "
+            f"not monotone: met at {_count(size.bidders)} bidders ({_units(units(size.bidders), _count)}), "
             f"missed again at {_count(size.again)}"
         ),
     }
@@ -227,6 +229,10 @@ def _beyond_log(evidence: Evidence, bidders: int) -> str:
 
 def _count(number: int) -> str:
     return f"{number:,}" if number < _EXACT_BELOW else f"about {float(f'{number:.2e}'):,.0f}"
+
+
+def _units(number: int, told: Callable[[int], str]) -> str:
+    return f"{told(number)} unit{'' if number == 1 else 's'}"
 
 
 def _log(evidence: Evidence) -> list[str]:

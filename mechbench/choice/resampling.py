@@ -129,6 +129,8 @@ def _measure(amounts: Amounts, measure: str) -> float:
     if measure == "efficiency":
         best = float(np.sum(amounts.best_welfare))
         return 1.0 - total / best if best > 0 else np.nan
+    if measure in MONEY and total == 0:  # the draws never show what little there is
+        return np.nan
     counted = float(np.sum(amounts.sold)) if measure in IF_SOLD else float(len(amounts.sold))
     return total / counted if counted > 0 else np.nan
 
