@@ -8,9 +8,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mechbench.contract import Floats, Functional
+from mechbench.engine.exact.places import contested_nodes
+from mechbench.engine.exact.resolution import NoRouteError, Resolution
 from mechbench.engine.exact.rules import EXPONENT, settled
 from mechbench.engine.exact.sizes import Sizes
-from mechbench.engine.exact.units import NoRouteError, Resolution, SlackDraws, contested_nodes
+from mechbench.engine.exact.slack import SlackDraws
 from mechbench.engine.exact.winners import Place, Ranked
 
 __all__ = ["chance_above"]
@@ -34,8 +36,7 @@ def chance_above(sizes: Sizes, functional: Functional, level: float, resolution:
         If the functional runs over anything but the best or the lowest winner.
     """
     if functional.over not in {"best", "lowest"}:
-        msg = "the chance of a gain needs a gain of the best or of the lowest winner"
-        raise NoRouteError(msg)
+        raise NoRouteError(functional)
     value, error = _contested(sizes, functional, level, resolution)
     if sizes.chance < 1.0:
         more, more_error = _slack(sizes, functional, level, resolution)

@@ -22,8 +22,8 @@ from numpy.typing import NDArray
 
 from mechbench.contract import Floats, InterimPrice
 from mechbench.engine.exact.order import OrderLaw, binomial_at_most
+from mechbench.engine.exact.resolution import LOOSE
 from mechbench.engine.exact.sizes import Sizes
-from mechbench.engine.exact.units import LOOSE
 from mechbench.engine.exact.winners import Place
 
 __all__ = ["interim_gain"]

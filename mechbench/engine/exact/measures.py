@@ -10,9 +10,10 @@ from mechbench.contract import MONEY, Floats, Functional, InterimPrice, Mechanis
 from mechbench.engine.estimate import Estimate
 from mechbench.engine.exact.chance import chance_above
 from mechbench.engine.exact.interim import interim_gain
+from mechbench.engine.exact.resolution import NoRouteError, Resolution
 from mechbench.engine.exact.sizes import Sizes
 from mechbench.engine.exact.supply_use import lost_welfare, no_sale, units_unsold
-from mechbench.engine.exact.units import NoRouteError, Resolution, expectation
+from mechbench.engine.exact.units import expectation
 from mechbench.market.market import Market
 
 __all__ = ["exact"]

@@ -8,9 +8,9 @@ import numpy as np
 
 from mechbench.contract import Floats
 from mechbench.engine.exact.order import OrderLaw, binomial_at_most
+from mechbench.engine.exact.resolution import Resolution
 from mechbench.engine.exact.rules import finite, nested, settled
 from mechbench.engine.exact.sizes import Sizes
-from mechbench.engine.exact.units import Resolution
 
 __all__ = ["lost_welfare", "no_sale", "units_unsold"]
 
