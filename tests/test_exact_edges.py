@@ -6,12 +6,13 @@ import math
 
 import numpy as np
 import pytest
+from scipy import special
 
 from mechbench.contract import IdenticalUnits
 from mechbench.discovery import family_class, mechanism_class
 from mechbench.engine.estimate import Estimate
 from mechbench.engine.evaluate import evaluate, evaluate_sizes
-from mechbench.engine.exact.order import OrderLaw
+from mechbench.engine.exact.order import OrderLaw, binomial_at_most
 from mechbench.market.market import Market
 
 OWN = mechanism_class("pay-as-bid")()
@@ -112,3 +113,35 @@ def test_the_reach_of_a_law_leaves_nothing_out(rank: float, count: float, growth
     assert mass[0, -1] * width < 3e-14 * total
     if growth == 0:
         assert total == pytest.approx(1.0, rel=1e-7)
+
+
+def test_huge_binomials_agree_with_the_incomplete_beta_function():
+    """The uniform expansion that serves huge counts has scipy's values, near the mean and far from it."""
+    for low, high in ((2e8, 2e8), (1.5e8, 1e12), (3e11, 7e11)):
+        mean = low / (low + high)
+        spread = np.sqrt(mean * (1 - mean) / (low + high))
+        chance = mean + spread * np.array([-9.0, -3.0, -1.0, -1e-3, 1e-3, 0.7, 2.0, 6.0])
+        found = binomial_at_most(np.array(low - 1), np.array(low + high - 1), chance, 1 - chance)
+        expected = special.betaincc(low, high, chance)
+        # a rounding of the chance moves the value by up to rounding * 0.4 / spread
+        np.testing.assert_allclose(found, expected, rtol=0, atol=2e-12 + 1e-16 * mean / spread)
+
+
+@pytest.mark.parametrize("units", [10**6, 5 * 10**11, 10**12 - 1])
+def test_interim_gains_of_huge_markets_settle(units):
+    """Interim gains of 10^12 bidders reach the bound, whatever the number of units."""
+    market = Market(family_class("exponential")(scale=1.0), 10**12, IdenticalUnits(units))
+    found = evaluate(market, mechanism_class("pay-as-bid")(), ["interim_gain"], method="exact")["interim_gain"]
+    assert found.status == "ok"
+
+
+@pytest.mark.parametrize(("reserve", "turnout"), [(25.0, 1.0), (0.0, 1e-9), (25.0, 1e-3)])
+def test_chances_given_a_rare_sale(reserve, turnout):
+    """With next to no sale, the one bidder there is gains more than the threshold with a chance in closed form."""
+    market = Market(family_class("exponential")(scale=1.0), 100, IdenticalUnits(10, reserve), turnout)
+    found = evaluate(market, mechanism_class("pay-as-bid")(), ["gain_chance"], method="exact")["gain_chance"]
+    assert found.status == "ok"
+    # alone above the reserve r, the bidder gains 1 - r / v: above 0.05 with chance exp(r - r / 0.95)
+    alone = np.exp(reserve - reserve / 0.95)
+    # a second bidder is there about 50 times the chance of one
+    assert abs(found.value - alone) < found.error + 100 * turnout * np.exp(-reserve)

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mechbench.contract import Floats, Functional
+from mechbench.engine.exact.order import binomial_at_most
 from mechbench.engine.exact.places import contested_nodes
 from mechbench.engine.exact.resolution import NoRouteError, Resolution
 from mechbench.engine.exact.rules import EXPONENT, settled
@@ -41,8 +42,11 @@ def chance_above(sizes: Sizes, functional: Functional, level: float, resolution:
     if sizes.chance < 1.0:
         more, more_error = _slack(sizes, functional, level, resolution)
         value, error = value + more, error + more_error
-    # a chance may come from draws so rare that the rules leave them out
-    return value, error + _LEFT_OUT
+    # a chance may come from draws so rare that the rules leave them out, if they are contested at all
+    contested = binomial_at_most(
+        sizes.bidders - sizes.units - 1, sizes.bidders, np.array(sizes.chance_not), np.array(sizes.chance)
+    )
+    return value, error + np.minimum(_LEFT_OUT, contested)
 
 
 def _amount(functional: Functional, place: Place, share: float, ratio: Floats) -> Floats:

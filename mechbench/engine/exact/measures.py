@@ -136,7 +136,7 @@ def _solve(
             value, bounds = chance_above(some, functional, threshold, fine)
         else:
             value, bounds = expectation(some, functional, fine)
-        return value / some.sale, bounds / some.sale
+        return value / some.sale, np.minimum(bounds / some.sale, 1.0)
 
     return _refined(sizes, given_a_sale, error, relative=False)
 

@@ -10,6 +10,8 @@ part [2]_.
    in tests/published/ against mpmath).
 .. [2] C. Loader, "Fast and accurate computation of binomial probabilities", 2000: the deviance form and the
    Stirling remainder (from memory; checked against mpmath).
+.. [3] N. M. Temme, "Asymptotic inversion of the incomplete beta function", *Journal of Computational and Applied
+   Mathematics* 41 (1992) 145-157, section 2: the uniform expansion (from memory; checked against scipy).
 """
 
 from __future__ import annotations
@@ -25,6 +27,8 @@ from mechbench.engine.exact.rules import EXPONENT
 __all__ = ["OrderLaw", "at_least_one", "binomial_at_most", "binomial_between"]
 
 
+_MANY = 1e8
+"""Exponents of a beta law from which on its distribution function comes from the uniform expansion."""
 _DEEP = -0.9
 """``s / mode - 1`` below which the logarithm of ``s / mode`` comes from the log-odds: nothing cancels there."""
 
@@ -114,10 +118,10 @@ class OrderLaw:
         s, rest, density : arrays (cells, nodes)
         """
         low, high, mode = self.rank[:, None], self.above[:, None], self.mode[:, None]
-        growth = np.expm1(y)
-        scale = 1.0 + mode * growth
+        growth, odds = np.expm1(y), np.exp(y)
         other = high / (low + high)
-        s = np.minimum(mode * np.exp(y) / scale, 1.0)  # not 1 + growth: deep in the tail that is 0
+        scale = other + mode * odds  # a sum of positive terms: a mode next to 1 keeps its digits
+        s = np.minimum(mode * odds / scale, 1.0)  # not 1 + growth: deep in the tail that is 0
         rest = other / scale
         both = np.stack([growth * other / scale, -mode * growth / scale])
         beyond = _log1p_beyond_linear(both)
@@ -125,7 +129,7 @@ class OrderLaw:
         deep = both[0] < _DEEP
         if deep.any():
             # 1 + over would be 0 from y = -37 on, but the tail matters where the amount grows up it
-            apart = low * (y - np.log1p(mode * growth) - both[0]) + high * beyond[1]
+            apart = low * (y - np.log(scale) - both[0]) + high * beyond[1]
             exponent = np.where(deep, apart, exponent)
         return s, rest, np.exp(exponent + self._log_peak()[:, None])
 
@@ -177,11 +181,42 @@ def binomial_at_most(limit: Floats, trials: Floats, chance: Floats, rest: Floats
     limit, trials, chance, rest = np.broadcast_arrays(limit, trials, chance, rest)
     inside = (limit >= 0) & (limit < trials)
     low, high = np.where(inside, limit + 1.0, 1.0), np.where(inside, trials - limit, 1.0)
+    many = np.minimum(low, high) > _MANY
+    if many.all():
+        return np.where(inside, _beta_above(low, high, chance, rest), np.where(limit < 0, 0.0, 1.0))
+    if many.any():
+        result = np.empty(limit.shape)
+        for part in (many, ~many):
+            result[part] = binomial_at_most(limit[part], trials[part], chance[part], rest[part])
+        return result
     use_rest = rest < 0.5  # noqa: PLR2004
     near = special.betaincc(low, high, np.clip(np.where(use_rest, 0.5, chance), 0.0, 1.0))
     if use_rest.any():
         near = np.where(use_rest, special.betainc(high, low, np.clip(rest, 0.0, 1.0)), near)
     return np.where(inside, near, np.where(limit < 0, 0.0, 1.0))
+
+
+def _beta_above(low: Floats, high: Floats, s: Floats, rest: Floats) -> Floats:
+    """P(Beta(low, high) > s) for two huge exponents, by the uniform expansion to its first correction [3]_.
+
+    The next term is of the order of ``min(low, high) ** -1.5``, below 1e-12 here.
+    """
+    total = low + high
+    away = np.where(s < 0.5, s - low / total, high / total - rest)  # noqa: PLR2004
+    both = _log1p_beyond_linear(np.stack([away * (total / low), -away * (total / high)]))
+    deviance = -(low * both[0] + high * both[1])
+    side = np.sign(away)
+    eta = side * np.sqrt(2.0 * deviance / total)
+    root = np.sqrt(low / total * (high / total))
+    apart = np.abs(eta) > 1e-11  # noqa: PLR2004
+    level = np.where(
+        apart,
+        1.0 / np.where(apart, eta, 1.0) - root / np.where(apart, away, 1.0),
+        (low - high) / total / (3.0 * root),
+    )
+    correction = np.exp(-deviance) / np.sqrt(2.0 * np.pi * total) * level
+    chance: Floats = np.clip(0.5 * special.erfc(side * np.sqrt(deviance)) - correction, 0.0, 1.0)
+    return chance
 
 
 def at_least_one(trials: Floats, chance: Floats, rest: Floats) -> Floats:
