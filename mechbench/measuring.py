@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from typing import Literal
 
 from mechbench import discovery
-from mechbench.contract import MEASURES, MONEY, IdenticalUnits, InputError
+from mechbench.contract import MEASURES, MONEY, IdenticalUnits, InputError, number_words
 from mechbench.engine.evaluate import evaluate
 from mechbench.market.market import Market
 from mechbench.show.figures import figure, largest_error, plus_minus
@@ -84,7 +84,8 @@ def cell_table(rows: Sequence[Row], style: Style) -> str:
     first = rows[0]
     title = (
         f"{first['mechanism']}: {first['family']} values ({first['parameters']}), {first['bidders']:,} "
-        f"bidders, {first['supply']}, reserve {first['reserve']:g}, turnout {first['turnout']:g}"
+        f"bidders, {first['supply']}, reserve {number_words(_real(first['reserve']))}, "
+        f"turnout {number_words(_real(first['turnout']))}"
     )
     header = ["measure", "value", "error", "method", "status"]
     body = [

@@ -162,6 +162,11 @@ class TestOutput:
         out = run(capsys, *CELL, "--measure", "worst_gain", "--measure", "revenue")[1]
         assert re.search(r"^worst_gain +0\.05000 +(< )?\S+ +exact +ok", out, re.MULTILINE)
 
+    def test_a_reserve_is_told_as_given(self, capsys):
+        """The heading of a cell rounds neither reserve nor turnout."""
+        out = run(capsys, *CELL, "--reserve", "0.99999999", "--turnout", "0.7000001", "--measure", "no_sale")[1]
+        assert "reserve 0.99999999, turnout 0.7000001" in out
+
     def test_infinite(self, capsys):
         """An infinite revenue is null in JSON, with a status, and a word in the table."""
         line = "measure --mechanism pay-as-bid --family pareto --set tail_index=1.2 --bidders 50 --units 2"

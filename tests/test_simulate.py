@@ -409,12 +409,15 @@ def test_heavy_tails_say_what_no_number_can(tail_index, measure, mechanism, word
 
 
 def test_nothing_sold_is_said():
-    """Where no draw sells, a measure conditional on a sale has no value, and says why."""
+    """Where no draw sells, a measure conditional on a sale has no value, money no interval, and both say why."""
     market = Market(UNIFORM, 2, IdenticalUnits(1, 1 - 1e-12))
-    found = simulate(market, [PAY_AS_BID], ["worst_gain", "no_sale"], error=0.01, seed=1, max_draws=256)
+    measures = ["worst_gain", "no_sale", "revenue"]
+    found = simulate(market, [PAY_AS_BID], measures, error=0.01, seed=1, max_draws=256)
     assert np.isnan(found.estimate(0, "worst_gain").value)
     assert found.estimate(0, "worst_gain").status == "nothing was sold in any draw"
     assert found.estimate(0, "no_sale").value == 1
+    money = found.estimate(0, "revenue")
+    assert (money.value, money.error, money.status) == (0, np.inf, "no money in any draw")
 
 
 # Bounds and bad input.

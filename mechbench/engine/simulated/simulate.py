@@ -23,6 +23,7 @@ from mechbench.market.market import Market
 __all__ = ["Simulation", "simulate"]
 
 NO_SALE = "nothing was sold in any draw"
+NO_MONEY = "no money in any draw"
 NOT_REACHED = "error not reached"
 
 _FORESIGHT = 2**0.5 / 1.1
@@ -67,6 +68,9 @@ class Simulation:
             return self._without_number(math.nan if measure == "efficiency" else math.inf, note)
         if not ratio.known:
             return self._without_number(math.nan, NO_SALE)
+        if measure in MONEY and ratio.value == 0:
+            # the scatter of draws that are all 0 says nothing of what a rare sale is worth
+            return Estimate(0.0, math.inf, "simulated", NO_MONEY, self.seed)
         value = max(0.0, ratio.value) if measure == "interim_gain" else ratio.value
         return self._estimate(value, ratio.half_width, self._accepted(measure, value), note)
 
@@ -93,7 +97,9 @@ class Simulation:
         for i in range(len(self.mechanisms)):
             for measure in measures:
                 estimate = self.estimate(i, measure)
-                if estimate.status == NO_SALE or estimate.error > slack * self._accepted(measure, estimate.value):
+                if estimate.status in {NO_SALE, NO_MONEY} or estimate.error > slack * self._accepted(
+                    measure, estimate.value
+                ):
                     return False
         return True
 
