@@ -165,7 +165,7 @@ class TestOutput:
     def test_a_reserve_is_told_as_given(self, capsys):
         """The heading of a cell rounds neither reserve nor turnout."""
         out = run(capsys, *CELL, "--reserve", "0.99999999", "--turnout", "0.7000001", "--measure", "no_sale")[1]
-        assert "reserve 0.99999999, turnout 0.7000001" in out
+        assert "reserve 0.99999999, turnout 0.7000001" in " ".join(out.split())
 
     def test_infinite(self, capsys):
         """An infinite revenue is null in JSON, with a status, and a word in the table."""
