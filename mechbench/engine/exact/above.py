@@ -112,7 +112,8 @@ def fold(amount: Floats, outer: Floats, *inner: Floats) -> Floats:
 def settle(sums: Floats) -> tuple[Floats, Floats]:
     """Value and error bound from the columns of `fold`."""
     full = sums[:, :1]
-    rules = np.stack([np.broadcast_to(full, (full.size, 4)), sums[:, 1::2], sums[:, 2::2]], axis=-1)
+    rules = np.empty((len(sums), 4, 3))
+    rules[..., 0], rules[..., 1], rules[..., 2] = full, sums[:, 1::2], sums[:, 2::2]
     return sums[:, 0], bound(rules, 0.25 * np.abs(full)).sum(axis=1)
 
 

@@ -98,6 +98,8 @@ class Sizes:
     @cached_property
     def sale(self) -> Floats:
         """P(at least one unit is sold), array (cells,)."""
+        if self.chance_not <= 0:
+            return np.ones_like(self.bidders)
         return at_least_one(self.bidders, np.array(self.chance), np.array(self.chance_not))
 
     def law(self, rank: Floats) -> OrderLaw:
